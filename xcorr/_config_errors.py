@@ -98,15 +98,13 @@ def _rule_error(words: str, got: Any, context: dict[str, Any], *, at_top: bool) 
 
     A rule about a table begins with the key that breaks it, where one key does.
     """
-    problem, advice = context["problem"], context["do"]
-    if not isinstance(got, BaseModel):
-        return SettingsError(f"{words} {problem}", _shown(got), advice)
-    if at_top:
-        return SettingsError(problem, "", advice)
+    problem, advice, said = context["problem"], context["do"], context["got"]
     key = problem.split()[0]
-    if key in type(got).model_fields:
-        return SettingsError(f"{words}.{problem}", _shown(getattr(got, key)), advice)
-    return SettingsError(f"{words} {problem}", "", advice)
+    if at_top:
+        return SettingsError(problem, said, advice)
+    if isinstance(got, dict) and key in got:
+        return SettingsError(f"{words}.{problem}", said or _shown(got[key]), advice)
+    return SettingsError(f"{words} {problem}", said or _shown(got), advice)
 
 
 def _known_location(
@@ -147,7 +145,7 @@ def _unknown_key(key: str, table: type[BaseModel], location: tuple[str | int, ..
 
 def _shown(value: Any) -> str:
     """A value as text, short enough for a one-line error."""
-    if isinstance(value, BaseModel | dict):
+    if isinstance(value, dict):
         return "a table"
     text = f"[{', '.join(_shown(item) for item in value)}]" if isinstance(value, tuple) else repr(value)
     return text if len(text) <= 80 else text[:77] + "..."

@@ -34,9 +34,9 @@ MAX_VELOCITIES = 100_001
 MAX_SPEED_KM_S = 30_000.0
 
 
-def _wrong(problem: str, do: str) -> PydanticCustomError:
-    """A validation error that keeps its advice; braces are doubled for pydantic's templating."""
-    return PydanticCustomError("xcorr", "{problem}", {"problem": problem, "do": do})
+def _wrong(problem: str, do: str, got: str = "") -> PydanticCustomError:
+    """A broken rule with its advice; without `got` the offending value itself is shown."""
+    return PydanticCustomError("xcorr", "{problem}", {"problem": problem, "do": do, "got": got})
 
 
 def _as_path(value: Any, info: ValidationInfo) -> Any:
@@ -100,11 +100,9 @@ class Target(_Table):
     @model_validator(mode="after")
     def _one_position(self) -> Target:
         if self.companion_xy is not None and self.companion_offset_arcsec is not None:
-            raise _wrong("gives both companion_xy and companion_offset_arcsec", "keep one of them")
+            raise _wrong("places the companion twice", "keep one", "companion_xy and companion_offset_arcsec")
         if self.systemic_velocity_err_km_s is not None and self.systemic_velocity_km_s is None:
-            raise _wrong(
-                "gives systemic_velocity_err_km_s without systemic_velocity_km_s", "give the velocity too"
-            )
+            raise _wrong("systemic_velocity_err_km_s needs systemic_velocity_km_s too", "give the velocity")
         return self
 
 
@@ -149,7 +147,7 @@ class Exposure(_Table):
     @model_validator(mode="after")
     def _one_quality_rule(self) -> Exposure:
         if self.quality_bad_bits is not None and self.quality_good_bits is not None:
-            raise _wrong("gives both quality_bad_bits and quality_good_bits", "keep one of them")
+            raise _wrong("says twice which bits count", "keep one", "quality_bad_bits and quality_good_bits")
         return self
 
 
@@ -196,7 +194,7 @@ class Search(_Table):
         if (stop - start) / step > MAX_VELOCITIES - 1:
             raise _wrong(f"velocity_km_s asks for more than {MAX_VELOCITIES} velocities", "use a wider step")
         if repeated := _repeated(self.molecules):
-            raise _wrong(f"molecules lists {repeated} twice", "list each molecule once")
+            raise _wrong("molecules lists a name twice", "list each molecule once", repeated)
         return self
 
 
@@ -234,9 +232,13 @@ class Settings(_Table):
     def _something_to_search(self) -> Settings:
         names = (*self.search.molecules, *(template.name for template in self.template))
         if not names:
-            raise _wrong("[search].molecules and [[template]] are both empty", "name at least one molecule")
+            raise _wrong(
+                "[search].molecules and [[template]] are both empty", "name a molecule", "nothing to search"
+            )
         if repeated := _repeated(names):
-            raise _wrong(f"{repeated} names two templates", "give each [[template]] a name of its own")
+            raise _wrong(
+                "a [[template]] name is taken", "give each template its own name", f"{repeated} twice"
+            )
         return self
 
     def velocity_grid(self) -> tuple[float, ...]:
