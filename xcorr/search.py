@@ -21,6 +21,7 @@ from scipy.interpolate import CubicSpline
 
 from xcorr.kernels.projection import sum_of_products, whiten_overlaps
 from xcorr.kernels.summation import eliminate_continuum, psf_sums
+from xcorr.psf import Stamps
 from xcorr.starlight import Nuisance, StarlightFit
 
 CORRECTION_STEP = 4
@@ -177,9 +178,7 @@ def corrections(
     n_spaxel, n_continuum = len(weights), 0 if diagonal_only else len(templates.continuum)
     coarse, interpolation = velocity_interpolation(n_velocity, step)
     n_coarse = coarse.size
-    flat = np.vstack(
-        [templates.columns[:, coarse].reshape(-1, n_wave), templates.continuum[:n_continuum]]
-    )
+    flat = np.vstack([templates.columns[:, coarse].reshape(-1, n_wave), templates.continuum[:n_continuum]])
     left, right = (np.arange(n_molecule),) * 2 if diagonal_only else templates.pairs
     molecules = np.empty((n_spaxel, left.size, n_coarse), np.float32)
     cross = np.empty((n_spaxel, n_molecule * n_continuum, n_coarse), np.float32)
@@ -195,9 +194,7 @@ def corrections(
         sum_of_products(rows, left, right, n_coarse, molecules[block])
         if n_continuum:
             own = rows[:, :, n_molecule * n_coarse :]
-            whole = rows[:, :, : n_molecule * n_coarse].reshape(
-                len(rows), -1, n_molecule, n_coarse
-            )
+            whole = rows[:, :, : n_molecule * n_coarse].reshape(len(rows), -1, n_molecule, n_coarse)
             product = np.einsum("kpmv,kpu->pmuv", whole, own, optimize=True)
             cross[block] = product.reshape(len(product), -1, n_coarse)
             continuum[block] = np.einsum("kpu,kpw->puw", own, own)
@@ -226,36 +223,6 @@ def spaxel_maps(
     info = info.reshape(shape)
     np.subtract(info, taken.molecules @ taken.interpolation.astype(np.float32), out=info)
     return num.reshape(shape), info
-
-
-@dataclass(frozen=True)
-class Stamps:
-    """Spaxels and PSF profiles of a set of positions in one exposure.
-
-    Attributes
-    ----------
-    spaxels : int64 array (n_position, n_stamp)
-        Index y * nx + x, -1 for none.
-    profiles : float32 array (n_position, n_stamp, n_node)
-        Flux-normalised PSF at wavelength nodes.
-    node, fraction : arrays (n_wave,)
-        Linear interpolation between nodes.
-    """
-
-    spaxels: NDArray[np.int64]
-    profiles: NDArray[np.float32]
-    node: NDArray[np.int64]
-    fraction: NDArray[np.float32]
-
-    def __getitem__(self, block: slice) -> Stamps:
-        """A subset of the positions."""
-        return Stamps(self.spaxels[block], self.profiles[block], self.node, self.fraction)
-
-    @property
-    def captured(self) -> NDArray[np.float64]:
-        """Fraction of the PSF's flux inside the stamp, (n_position,)."""
-        inside = np.where(self.spaxels[:, :, None] >= 0, self.profiles, 0.0)
-        return inside.sum(axis=1, dtype=np.float64).mean(axis=1)
 
 
 @dataclass(frozen=True)
@@ -347,9 +314,7 @@ def position_sums(
     n_position, n_continuum = len(stamps.spaxels), len(templates.continuum)
     first = np.empty((n_position, n_wave), np.float32)
     second = np.empty((n_position, n_wave), np.float32)
-    psf_sums(
-        residual, weights, stamps.spaxels, stamps.profiles, stamps.node, stamps.fraction, first, second
-    )
+    psf_sums(residual, weights, stamps.spaxels, stamps.profiles, stamps.node, stamps.fraction, first, second)
     left, right = templates.pairs
     num = (first @ templates.columns.reshape(-1, n_wave).T).reshape(n_position, n_molecule, n_velocity)
     info = np.empty((n_position, left.size, n_velocity))
