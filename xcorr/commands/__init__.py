@@ -1,0 +1,1 @@
+"""One module per subcommand, each with a click command named ``command``; imported when called."""
