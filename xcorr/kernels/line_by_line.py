@@ -1,4 +1,4 @@
-"""Sum of Voigt lines on a wavenumber grid: threads own pieces of the grid, so the bits never depend on them."""
+"""Sum of Voigt lines on a wavenumber grid: threads own pieces of it, so the bits never depend on them."""
 
 from __future__ import annotations
 

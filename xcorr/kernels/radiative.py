@@ -1,4 +1,4 @@
-"""Formal solution of the plane-parallel transfer equation without scattering, source linear in optical depth."""
+"""Formal solution of plane-parallel transfer without scattering, source linear in optical depth."""
 
 from __future__ import annotations
 

@@ -1,0 +1,152 @@
+"""Pressure and temperature with depth: hydrostatic, grey, from effective temperature and gravity."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from xcorr.errors import InputError
+
+ADIABATIC_GRADIENT = 2.0 / 7.0  # dlnT/dlnP of a gas of rigid diatomic molecules
+TOP_BAR, BOTTOM_BAR = 1e-5, 300.0
+_FINE = 2000  # integration steps of the optical depth; layers are read off this
+
+
+@dataclass(frozen=True)
+class Structure:
+    """A plane-parallel hydrostatic atmosphere, given at layer boundaries, top first.
+
+    Attributes
+    ----------
+    pressure_bar, temperature_k : float64 array (n_layer + 1,)
+        At the boundaries; pressure ascends.
+    log_g : float
+        log10 of the surface gravity in cm s-2.
+    """
+
+    pressure_bar: NDArray[np.float64]
+    temperature_k: NDArray[np.float64]
+    log_g: float
+
+    def __post_init__(self) -> None:
+        pressure = np.ascontiguousarray(self.pressure_bar, np.float64)
+        temperature = np.ascontiguousarray(self.temperature_k, np.float64)
+        if pressure.ndim != 1 or pressure.shape != temperature.shape or pressure.size < 2:
+            raise InputError(
+                "pressure and temperature must be arrays of one length",
+                f"{pressure.shape}, {temperature.shape}",
+            )
+        if not (np.all(pressure > 0) and np.all(np.diff(pressure) > 0)):
+            raise InputError(
+                "layer pressures must be positive and ascend", f"{pressure}", "list the top first"
+            )
+        if not (np.all(np.isfinite(temperature)) and np.all(temperature > 0)):
+            raise InputError("layer temperatures must be positive", f"{temperature}", "give kelvin")
+        if not np.isfinite(self.log_g):
+            raise InputError("log g must be finite", f"{self.log_g}")
+        pressure.flags.writeable = temperature.flags.writeable = False
+        object.__setattr__(self, "pressure_bar", pressure)
+        object.__setattr__(self, "temperature_k", temperature)
+
+    @property
+    def layer_pressure_bar(self) -> NDArray[np.float64]:
+        """Geometric mean pressure of each layer."""
+        return np.sqrt(self.pressure_bar[:-1] * self.pressure_bar[1:])
+
+    @property
+    def layer_temperature_k(self) -> NDArray[np.float64]:
+        """Mean temperature of each layer."""
+        return 0.5 * (self.temperature_k[:-1] + self.temperature_k[1:])
+
+
+def eddington_temperature(t_eff: float, tau: NDArray | float) -> NDArray[np.float64]:
+    """T of a grey atmosphere in radiative equilibrium, T^4 = (3/4) T_eff^4 (tau + 2/3)."""
+    return t_eff * (0.75 * (np.asarray(tau, np.float64) + 2.0 / 3.0)) ** 0.25
+
+
+def rosseland_opacity(temperature_k: NDArray | float, pressure_bar: NDArray | float) -> NDArray[np.float64]:
+    """Rosseland mean opacity of solar-composition gas without grains, cm2 / g.
+
+    Notes
+    -----
+    Freedman et al. 2014, ApJS 214, 25, eqs. 3-5 and Table 2, at [M/H] = 0. Coefficients from memory; the fit
+    was made for 75-4000 K and 1e-6-300 bar.
+    """
+    log_t = np.log10(temperature_k)
+    log_p = np.log10(np.asarray(pressure_bar) * 1e6)  # dyn cm-2
+    low = (
+        10.602 * np.arctan(log_t - 2.882) - 6.09e-15 / (log_p + 2.954) * np.exp((log_t + 2.526) ** 2) - 5.490
+    )
+    cool = -14.051 + 3.055 * log_t + 0.024 * log_t**2 + log_p * (1.877 - 0.445 * log_t)
+    hot = 82.241 - 55.456 * log_t + 8.754 * log_t**2 + log_p * (0.7048 - 0.0414 * log_t)
+    high = np.where(log_t < np.log10(800.0), cool, hot)
+    return 10.0**low + 10.0**high
+
+
+def grey_structure(
+    t_eff: float,
+    log_g: float,
+    *,
+    n_layers: int = 60,
+    top_bar: float = TOP_BAR,
+    bottom_bar: float = BOTTOM_BAR,
+) -> Structure:
+    """Hydrostatic grey atmosphere, convective where the radiative gradient would be steeper.
+
+    Parameters
+    ----------
+    t_eff : float
+        Effective temperature, K.
+    log_g : float
+        Surface gravity, log10 cm s-2.
+    n_layers : int
+        Layers equally spaced in log pressure, at least 10.
+    top_bar, bottom_bar : float
+        Pressures of the first and the last boundary.
+
+    Returns
+    -------
+    Structure
+
+    Raises
+    ------
+    InputError
+        For values outside 300-4000 K, log g 2-6, or fewer than 10 layers.
+
+    Notes
+    -----
+    The optical depth is that of the Rosseland mean of grain-free solar-composition gas
+    (`rosseland_opacity`). Gradient: dlnT/dlnP = min[(3/16) kappa P / g (T_eff/T)^4, 2/7]; the first is
+    dT^4 = (3/4) T_eff^4 dtau, so that T(tau) is Eddington's above the convective zone. Real atmospheres
+    are not grey: their upper layers are cooler than 0.84 T_eff, and grains heat those of warm dwarfs.
+    """
+    if not 300.0 <= t_eff <= 4000.0:
+        raise InputError(
+            "t_eff is outside 300-4000 K", f"{t_eff:g}", "give an effective temperature in range"
+        )
+    if not 2.0 <= log_g <= 6.0:
+        raise InputError("log_g is outside 2-6", f"{log_g:g}", "give log10 of the gravity in cm s-2")
+    if n_layers < 10:
+        raise InputError("too few layers", f"{n_layers}", "use at least 10 (50 or more for science)")
+    if not 0.0 < top_bar < bottom_bar:
+        raise InputError("the top pressure must be positive and below the bottom", f"{top_bar}, {bottom_bar}")
+    log_pressure = np.linspace(np.log(top_bar), np.log(bottom_bar), _FINE + 1)
+    step = log_pressure[1] - log_pressure[0]
+    gravity = 10.0**log_g
+
+    def gradient(ln_p: float, ln_t: float) -> float:
+        pressure, temperature = np.exp(ln_p), np.exp(ln_t)
+        opacity = rosseland_opacity(temperature, pressure)
+        radiative = 3.0 / 16.0 * opacity * pressure * 1e6 / gravity * (t_eff / temperature) ** 4
+        return min(float(radiative), ADIABATIC_GRADIENT)
+
+    ln_t = np.empty(_FINE + 1)
+    skin = eddington_temperature(t_eff, 0.0)
+    ln_t[0] = np.log(eddington_temperature(t_eff, rosseland_opacity(skin, top_bar) * top_bar * 1e6 / gravity))
+    for k in range(_FINE):
+        half = ln_t[k] + 0.5 * step * gradient(log_pressure[k], ln_t[k])
+        ln_t[k + 1] = ln_t[k] + step * gradient(log_pressure[k] + 0.5 * step, half)
+    boundary = np.linspace(log_pressure[0], log_pressure[-1], n_layers + 1)
+    return Structure(np.exp(boundary), np.exp(np.interp(boundary, log_pressure, ln_t)), log_g)
