@@ -13,12 +13,13 @@ import hashlib
 import tempfile
 from pathlib import Path
 
+import carbon_monoxide
 import cia
 import partition
 import water
 
 HERE = Path(__file__).resolve().parent
-STEPS = {"h2o": water.build, "partition": partition.build, "cia": cia.build}
+STEPS = {"h2o": water.build, "co": carbon_monoxide.build, "partition": partition.build, "cia": cia.build}
 
 
 def write_checksums(out: Path) -> None:
