@@ -8,10 +8,8 @@ from __future__ import annotations
 
 import os
 import tempfile
-import threading
 import warnings
 from collections.abc import Callable, Iterable, Iterator, Sequence
-from contextlib import contextmanager
 from functools import partial
 from pathlib import Path
 from typing import Any, TypeVar
@@ -26,36 +24,11 @@ class WorkerError(XcorrError):
     """A worker process died; the message names the tasks that were running."""
 
 
-class _SingleThread:
-    """One BLAS/OpenMP thread while any task of this process runs.
+def single_thread() -> Any:
+    """Context manager: one BLAS and OpenMP thread in this process and thread."""
+    from threadpoolctl import threadpool_limits
 
-    The limit is a property of the process: of several tasks in threads the first to enter sets it and
-    the last to leave lifts it, or one task's end would free the threads of another.
-    """
-
-    def __init__(self) -> None:
-        self._lock = threading.Lock()
-        self._inside = 0
-        self._limiter: Any = None
-
-    @contextmanager
-    def __call__(self) -> Iterator[None]:
-        from threadpoolctl import threadpool_limits
-
-        with self._lock:
-            if self._inside == 0:
-                self._limiter = threadpool_limits(1)
-            self._inside += 1
-        try:
-            yield
-        finally:
-            with self._lock:
-                self._inside -= 1
-                if self._inside == 0:
-                    self._limiter.restore_original_limits()
-
-
-single_thread = _SingleThread()
+    return threadpool_limits(1)
 
 
 def _run_one(
@@ -108,7 +81,10 @@ def map_tasks(
     if jobs <= 1 or len(items) <= 1:
         yield from (_run_one(function, item) for item in items)
     elif threads:
-        yield from _on_workers(partial(_run_one, function), items, jobs, "threading")
+        # BLAS has one limit for the whole process, so the caller holds it while any thread works:
+        # the end of one task must not free the threads of another.
+        with single_thread():
+            yield from _on_workers(partial(_run_one, function), items, jobs, "threading")
     else:
         yield from _on_processes(function, items, jobs, labels)
 
@@ -116,7 +92,6 @@ def map_tasks(
 def _on_workers(one: Callable[..., Result], items: list[Any], jobs: int, backend: str) -> Iterator[Result]:
     from joblib import Parallel, delayed
 
-    # inner_max_num_threads would be refused by the threading backend; _run_one limits in either case.
     pool = Parallel(n_jobs=min(jobs, len(items)), backend=backend, return_as="generator", batch_size=1)
     results = pool(delayed(one)(item) for item in items)
     try:
