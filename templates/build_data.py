@@ -16,10 +16,17 @@ from pathlib import Path
 import carbon_monoxide
 import cia
 import partition
+import transmission
 import water
 
 HERE = Path(__file__).resolve().parent
-STEPS = {"h2o": water.build, "co": carbon_monoxide.build, "partition": partition.build, "cia": cia.build}
+STEPS = {
+    "h2o": water.build,
+    "co": carbon_monoxide.build,
+    "partition": partition.build,
+    "cia": cia.build,
+    "transmission": transmission.build,
+}
 
 
 def write_checksums(out: Path) -> None:

@@ -1,8 +1,8 @@
 """CO line strengths from one dipole function fixed by five published figures.
 
-Why: the CO table we have is smooth, but its strength is wrong by a factor that differs with the change of v
-(measured against HITRAN 2012: +24 % for dv = 2, -10 % for dv = 1, -30 % for dv = 3), and its first lines carry
-wrong rotational factors (P(1) 1.2, P(2) 1.07, R(1) 0.9 of what they should be). One dipole function with the
+Why: the CO table we have is smooth, but its strength is wrong by a factor that differs with the change of
+v (measured against HITRAN 2012: +24 % for dv = 2, -10 % for dv = 1, -30 % for dv = 3), and its first lines
+carry wrong rotational factors (P(1) 1.2, P(2) 1.07, R(1) 0.9 of what they should be). One dipole function with the
 wave functions of the Rydberg-Klein-Rees potential gives every band and isotopologue, with the rotational
 dependence (Herman-Wallis factor), from five measured numbers.
 
@@ -49,8 +49,8 @@ SUMS_296 = {1: 107.42051, 2: 224.69584 / 2, 3: 112.77575, 4: 661.17735 / 6}
 N_V, N_J = 16, 152
 
 # Published figures that fix the dipole function: the v = 0 dipole, C-O+, Debye (Muenter 1975, J. Mol.
-# Spectrosc. 55, 490: from memory), and the 12C16O band strengths of HITRAN 2012 at 296 K (Rothman et al. 2013;
-# summed by band), cm molecule-1.
+# Spectrosc. 55, 490: from memory), and the 12C16O band strengths of HITRAN 2012 at 296 K (Rothman et al.
+# 2013; summed by band), cm molecule-1.
 DIPOLE_V0 = -0.10980
 BAND_STRENGTHS = {(1, 0): 9.9685e-18, (2, 0): 7.5648e-20, (3, 0): 4.5681e-22, (4, 0): 1.5306e-24}
 # First guesses of the transition moments; the signs alternate from 1-0 on (Chackerian & Tipping 1983,

@@ -178,23 +178,29 @@ class TransmissionTable:
     Attributes
     ----------
     wavelength_um : ndarray (n_wave,)
-        Vacuum.
+        Vacuum, ascending.
+    optical_depth : mapping of str to ndarray (n_wave,)
+        By absorber (H2O includes its continuum), at `airmass` and `water_mm`. Scaling it by a factor is Beer's
+        law on averages over a sample: good while the factor stays within about a decade.
     transmission : mapping of str to ndarray (n_wave,)
-        By absorber, and ``"total"``; at the table's own airmass and water column.
+        exp(-optical_depth).
     airmass, water_mm : float
-        Of the table.
+        What the table refers to; water at zenith, mm precipitable.
     """
 
     wavelength_um: NDArray[np.float64]
-    transmission: MappingProxyType[str, NDArray[np.float64]]
+    optical_depth: MappingProxyType[str, NDArray[np.float64]]
     airmass: float
     water_mm: float
     source: str
     notes: str = ""
     digest: str = ""
     resolving_power: float = 1e5
+    transmission: MappingProxyType[str, NDArray[np.float64]] = field(init=False)
 
     def __post_init__(self) -> None:
+        transmission = {name: np.exp(-depth) for name, depth in self.optical_depth.items()}
+        object.__setattr__(self, "transmission", MappingProxyType(transmission))
         _freeze(self)
 
 
@@ -209,7 +215,7 @@ class MethaneTable:
     cross_section_cm2 : ndarray (n_wave,)
         cm2 molecule-1 at R = 100,000.
     saturated : ndarray (n_wave,) of bool
-        The value is a lower limit: the line core was black.
+        The value is a lower limit: the line core was too deep to be resolved.
     """
 
     wavenumber_per_cm: NDArray[np.float64]
@@ -327,13 +333,11 @@ def load_transmission_table() -> TransmissionTable:
     file, digest = _open("transmission.h5")
     with file:
         wavelength = file["wavelength_um"][()]
-        transmission = {
-            name: file["transmission"][name][()].astype(np.float64) for name in file["transmission"]
-        }
+        depth = {name: data[()].astype(np.float64) for name, data in file["optical_depth"].items()}
         head = dict(file.attrs)
     return TransmissionTable(
         wavelength_um=wavelength,
-        transmission=MappingProxyType(transmission),
+        optical_depth=MappingProxyType(depth),
         airmass=float(head["airmass"]),
         water_mm=float(head["water_mm"]),
         source=head["source"],
