@@ -14,7 +14,8 @@ LAYERS = (
     "spectral",
     *("cube", "template", "results"),
     "io",
-    *("lines", "atmosphere", "tellurics", "psf", "starlight", "star", "noise", "search", "significance"),
+    *("lines", "atmosphere", "tellurics", "psf", "starlight", "star", "noise", "search"),
+    *("exposure", "significance"),
     *("vetting", "injection", "abundance", "simulate"),
     *("inspection", "report", "_config_errors", "config", "pipeline", "cli"),
 )

@@ -143,6 +143,16 @@ def _unknown_key(key: str, table: type[BaseModel], location: tuple[str | int, ..
     return SettingsError(f"unknown key in {where}", repr(key), advice)
 
 
+def unknown_molecule(name: str, known: tuple[str, ...]) -> SettingsError:
+    """The error of a molecule that no built-in template is made of."""
+    lowered = {item.lower(): item for item in known}
+    near = difflib.get_close_matches(name.lower(), list(lowered), n=1, cutoff=0.5)
+    advice = f"did you mean {lowered[near[0]]}?" if near else f"use {', '.join(known)}"
+    return SettingsError(
+        "[search].molecules: no such built-in template", repr(name), f"{advice}; else give a [[template]]"
+    )
+
+
 def _shown(value: Any) -> str:
     """A value as text, short enough for a one-line error."""
     if isinstance(value, dict):

@@ -26,7 +26,7 @@ from pydantic import (
 )
 from pydantic_core import PydanticCustomError
 
-from xcorr._config_errors import in_words, settings_error
+from xcorr._config_errors import in_words, settings_error, unknown_molecule
 from xcorr.errors import SettingsError
 from xcorr.provenance import sha256_of_json
 
@@ -299,7 +299,7 @@ def load_settings(path: str | Path) -> Settings:
     Raises
     ------
     SettingsError
-        Broken TOML, unknown key, wrong type or value, or a named file that does not exist.
+        Broken TOML, unknown key or molecule, wrong type or value, or a named file that does not exist.
     OSError
         The run file cannot be read.
     """
@@ -316,6 +316,7 @@ def load_settings(path: str | Path) -> Settings:
         ) from None
     settings = parse_settings(text, base_dir=path.absolute().parent, source=path.name)
     check_files(settings)
+    check_molecules(settings)
     return settings
 
 
@@ -365,6 +366,22 @@ def check_files(settings: Settings) -> None:
                 'write "brightest", "none" or a file' if words.endswith(".reference") else "check the path"
             )
             raise SettingsError(f"{words}: no such file", str(path), advice)
+
+
+def check_molecules(settings: Settings) -> None:
+    """Every name in ``[search].molecules`` is a built-in template.
+
+    Raises
+    ------
+    SettingsError
+        With the nearest known name.
+    """
+    from xcorr.atmosphere import BUILTIN_MOLECULES
+
+    known = (*BUILTIN_MOLECULES, "full")
+    for name in settings.search.molecules:
+        if name not in known:
+            raise unknown_molecule(name, known)
 
 
 def named_files(settings: Settings) -> list[tuple[str, Path]]:

@@ -66,7 +66,7 @@ class SourceImage:
 class Inspection:
     """Everything `inspect_cube` found; the fields are the keys of ``xcorr inspect --json``.
 
-    Sampling figures are medians over the channels with the extremes beside them, (low, median, high).
+    Wavelengths are vacuum whatever the file's medium; sampling figures are (low, median, high) over channels.
     """
 
     file: str
@@ -77,7 +77,7 @@ class Inspection:
     nx: int
     n_orders: int
     wavelength_range_um: tuple[float, float]
-    medium: str
+    medium_of_file: str
     frame: str
     barycentric_velocity_km_s: float | None
     channel_km_s: tuple[float, float, float]
@@ -122,7 +122,7 @@ def inspect_cube(cube: Cube) -> Inspection:
         nx=nx,
         n_orders=int(np.unique(cube.order).size),
         wavelength_range_um=(low, high),
-        medium="vacuum",
+        medium_of_file=_medium_of_file(cube),
         frame=cube.frame,
         barycentric_velocity_km_s=cube.barycentric_velocity_km_s,
         channel_km_s=_low_median_high(width),
@@ -142,6 +142,12 @@ def inspect_cube(cube: Cube) -> Inspection:
         brightest=brightest,
         notes=(*cube.notes, *source_notes),
     )
+
+
+def _medium_of_file(cube: Cube) -> str:
+    """ "vacuum" or "air" as the reader took the file's wavelengths to be; the reader notes it last."""
+    said = cube.planes.get("spectral_axis", "").rsplit(", ", 1)[-1]
+    return said if said in ("vacuum", "air") else "vacuum"
 
 
 def channel_widths_km_s(cube: Cube) -> NDArray[np.float64]:

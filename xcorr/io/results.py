@@ -69,19 +69,18 @@ def _write_array(file: Any, name: str, values: NDArray[Any]) -> None:
         values = _as_fixed_text(values)
     large = values.ndim > 0 and values.nbytes >= _COMPRESS_FROM_BYTES
     options: dict[str, Any] = {"compression": "gzip", "compression_opts": 4, "shuffle": True} if large else {}
-    dtype = None
-    if values.dtype.kind == "S":
-        import h5py
-
-        # Fixed-length text: the heap of variable-length text is not reproducible by promise.
-        dtype = h5py.string_dtype("utf-8", max(values.dtype.itemsize, 1))
-    file.create_dataset(name, data=values, dtype=dtype, track_times=False, **options)
+    file.create_dataset(name, data=values, track_times=False, **options)
 
 
 def _as_fixed_text(values: NDArray[Any]) -> NDArray[Any]:
+    """Text of fixed length in UTF-8: the heap of variable-length text is not reproducible by promise."""
+    import h5py
+
     encoded = [("" if item is None else str(item)).encode("utf-8") for item in values.ravel().tolist()]
     width = max((len(item) for item in encoded), default=1) or 1
-    return np.array(encoded, dtype=f"S{width}").reshape(values.shape)
+    return (
+        np.array(encoded, dtype=f"S{width}").reshape(values.shape).astype(h5py.string_dtype("utf-8", width))
+    )
 
 
 def read_result(path: str | Path) -> RunResult:
