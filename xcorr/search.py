@@ -99,7 +99,7 @@ def project_templates(
     )
 
 
-def _support_overlaps(
+def support_overlaps(
     weights: NDArray[np.float32], nuisance: Nuisance, flat: NDArray[np.float32]
 ) -> tuple[NDArray[np.float32], NDArray[np.float32]]:
     """N'W t~ for a block of spaxels: one small product on the support of each spline.
@@ -185,7 +185,7 @@ def corrections(
     continuum = np.empty((n_spaxel, n_continuum, n_continuum), np.float32)
     for begin in range(0, n_spaxel, SPAXEL_BLOCK):
         block = slice(begin, min(begin + SPAXEL_BLOCK, n_spaxel))
-        overlaps, extras = _support_overlaps(weights[block], nuisance, flat)
+        overlaps, extras = support_overlaps(weights[block], nuisance, flat)
         whiten_overlaps(
             overlaps, extras, fit.band[block], fit.scale[block], fit.border[block], fit.corner[block],
             fit.corner_scale[block],

@@ -1,0 +1,297 @@
+"""From sums at the target and at null positions to calibrated S/N, probabilities and verdicts."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from xcorr.engine import Sums
+from xcorr.errors import CoverageError, Note
+from xcorr.results import MoleculeResult, NullSummary
+from xcorr.significance import (
+    MIN_NULL_POSITIONS,
+    Calibration,
+    SearchVolume,
+    at_velocity,
+    calibrate,
+    combined_global_p,
+    held_out,
+    peak,
+    velocity_curvature,
+    verdict,
+    wider,
+)
+
+FAR_ELEMENTS = 2.0
+"""Velocities beyond this many resolution elements from the fitted signal count as far."""
+ZERO_POINT_ELEMENTS = 0.02
+"""Wavelength zero-point error without tellurics to check it, in resolution elements (common practice, no
+source)."""
+
+
+@dataclass(frozen=True)
+class Evidence:
+    """What the search left: the input of the verdicts.
+
+    Attributes
+    ----------
+    names : tuple of str
+    velocity_km_s : array (n_velocity,)
+    target : Sums
+        One position.
+    gram : array (n_molecule, n_velocity, n_molecule, n_velocity)
+        Full information matrix at the target.
+    nulls : Sums or None
+        Null positions; None for an extracted spectrum.
+    position_correlation : array (n_null, n_null)
+    n_positions : int
+        Positions searched: 1 unless blind.
+    resolution_km_s : float
+    zero_point_err_km_s : float
+        Of the wavelengths, NaN where nothing tells.
+    systemic_velocity_km_s : float or None
+    """
+
+    names: tuple[str, ...]
+    velocity_km_s: NDArray[np.float64]
+    target: Sums
+    gram: NDArray[np.float64]
+    nulls: Sums | None
+    position_correlation: NDArray[np.float64]
+    n_positions: int
+    resolution_km_s: float
+    zero_point_err_km_s: float
+    systemic_velocity_km_s: float | None
+
+    @property
+    def step_km_s(self) -> float:
+        """Velocity step."""
+        return float(self.velocity_km_s[1] - self.velocity_km_s[0]) if self.velocity_km_s.size > 1 else 1.0
+
+    def correlation(self, m: int) -> NDArray[np.float64]:
+        """Correlation of the null S/N of molecule m between velocities, (n_velocity, n_velocity)."""
+        own = self.gram[m, :, m]
+        scale = np.sqrt(np.maximum(np.diagonal(own), 1e-300))
+        return own / scale[:, None] / scale[None, :]
+
+
+@dataclass(frozen=True)
+class Curves:
+    """Raw and calibrated curves at the target, (n_molecule, n_velocity)."""
+
+    raw: NDArray[np.float64]
+    solo: NDArray[np.float64]
+    conditional: NDArray[np.float64]
+    raw_conditional: NDArray[np.float64]
+    signal_free: NDArray[np.float64]
+    null_raw: NDArray[np.float64] | None
+    null_maxima: NDArray[np.float64]
+    laws: tuple[Calibration, ...]
+    conditional_laws: tuple[Calibration, ...]
+
+
+def fitted_signal(evidence: Evidence, index: int) -> NDArray[np.float64]:
+    """Amplitudes of the joint fit at one velocity of the grid, (n_molecule,)."""
+    amplitude, error = evidence.target.joint.joint()
+    values = amplitude[0, :, index]
+    return np.where(np.isfinite(error[0, :, index]), values, 0.0)
+
+
+def remove_signal(evidence: Evidence, index: int) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+    """Raw solo and conditional S/N at the target after the joint fit at one velocity is taken out.
+
+    Returns
+    -------
+    solo, conditional : arrays (n_molecule, n_velocity)
+    """
+    amplitude = fitted_signal(evidence, index)
+    taken = np.einsum("mvn,n->mv", evidence.gram[:, :, :, index], amplitude)
+    with np.errstate(invalid="ignore", divide="ignore"):
+        solo = (evidence.target.num[0] - taken) / np.sqrt(evidence.target.info[0])
+    joint = evidence.target.joint
+    left = type(joint)(joint.num - taken[None], joint.info)
+    values, errors = left.joint()
+    return solo, np.where(np.isfinite(errors), values / errors, np.nan)[0]
+
+
+def _far(evidence: Evidence, index: int) -> NDArray[np.bool_]:
+    distance = np.abs(evidence.velocity_km_s - evidence.velocity_km_s[index])
+    return distance > FAR_ELEMENTS * evidence.resolution_km_s
+
+
+def _far_law(curve: NDArray, far: NDArray[np.bool_], correlation: NDArray) -> Calibration | None:
+    """Law of the far velocities of one curve; None where they hold fewer than three independent values."""
+    good = far & np.isfinite(curve)
+    if not good.any():
+        return None
+    try:
+        law = calibrate(curve[good][None], correlation[np.ix_(good, good)], np.eye(1), "far velocities")
+    except CoverageError:
+        return None
+    return Calibration(law.mean, law.std, law.nu_eff, max(1, round(law.nu_eff + 1.0)), law.family)
+
+
+def _laws(
+    null: NDArray | None, signal_free: NDArray, far: NDArray, correlation: NDArray, positions: NDArray
+) -> Calibration:
+    """Positions where there are enough of them, widened by the far velocities if those scatter more."""
+    law = _far_law(signal_free, far, correlation)
+    if null is not None and np.isfinite(null).all(axis=1).sum() >= MIN_NULL_POSITIONS:
+        own = calibrate(null, correlation, positions)
+        return own if law is None else wider(own, law)
+    if law is None:
+        # no null at all: the claimed errors, trusted like three values
+        return Calibration(0.0, 1.0, 3.0, 0, "claimed")
+    return law
+
+
+def calibrated_curves(evidence: Evidence) -> Curves:
+    """Calibrate the curves at the target; the fitted signal never inflates its own null."""
+    raw = evidence.target.snr()[0]
+    raw_conditional = evidence.target.conditional()[0]
+    null = None if evidence.nulls is None else evidence.nulls.snr()
+    null_conditional = None if evidence.nulls is None else evidence.nulls.conditional()
+    index = _strongest_index(raw)
+    far = _far(evidence, index)
+    signal_free, signal_free_conditional = remove_signal(evidence, index)
+    laws, conditional_laws, maxima = [], [], []
+    for m in range(len(evidence.names)):
+        correlation = evidence.correlation(m)
+        own = None if null is None else null[:, m]
+        own_conditional = None if null_conditional is None else null_conditional[:, m]
+        law = _laws(own, signal_free[m], far, correlation, evidence.position_correlation)
+        laws.append(law)
+        conditional_laws.append(
+            _laws(
+                own_conditional, signal_free_conditional[m], far, correlation, evidence.position_correlation
+            )
+        )
+        if own is None:
+            maxima.append(np.array([np.nanmax(law.snr(signal_free[m][far]))]) if far.any() else np.zeros(0))
+        else:
+            calibrated = held_out(own, correlation, evidence.position_correlation)
+            kept = calibrated[np.isfinite(calibrated).all(axis=1)]
+            maxima.append(kept.max(axis=1) if len(kept) else np.zeros(0))
+    length = max(len(one) for one in maxima)
+    padded = np.full((len(maxima), length), np.nan)
+    for m, one in enumerate(maxima):
+        padded[m, : len(one)] = one
+    return Curves(
+        raw=raw,
+        solo=np.stack([law.snr(raw[m]) for m, law in enumerate(laws)]),
+        conditional=np.stack([law.snr(raw_conditional[m]) for m, law in enumerate(conditional_laws)]),
+        raw_conditional=raw_conditional,
+        signal_free=signal_free,
+        null_raw=null,
+        null_maxima=padded,
+        laws=tuple(laws),
+        conditional_laws=tuple(conditional_laws),
+    )
+
+
+def _strongest_index(raw: NDArray) -> int:
+    """Grid velocity of the highest raw S/N of any molecule."""
+    filled = np.where(np.isfinite(raw), raw, -np.inf)
+    return int(np.unravel_index(np.argmax(filled), filled.shape)[1])
+
+
+def judge(
+    evidence: Evidence,
+    curves: Curves,
+    *,
+    descriptions: Sequence[str],
+    units: Sequence[str],
+    masked_fraction: NDArray,
+    captured: float,
+    position_xy: tuple[float, float] | None,
+) -> tuple[tuple[MoleculeResult, ...], list[Note]]:
+    """One `MoleculeResult` per template, and the doubts."""
+    peaks = [peak(evidence.velocity_km_s, curve) for curve in curves.solo]
+    strongest = peaks[int(np.argmax([height for _, height, _ in peaks]))][0]
+    notes: list[Note] = []
+    results = []
+    for m, name in enumerate(evidence.names):
+        law = curves.laws[m]
+        velocity, snr, index = peaks[m]
+        curvature = velocity_curvature(evidence.correlation(m), evidence.step_km_s)
+        raw = float(law.mean + snr * law.scale)
+        p_local = law.p_local(raw)
+        span = float(np.ptp(evidence.velocity_km_s))
+        volume = SearchVolume(span, curvature, len(evidence.names), evidence.n_positions)
+        p_global, extrapolated, exceeding = combined_global_p(
+            volume.p_global(p_local), snr, curves.null_maxima[m], len(evidence.names) * evidence.n_positions
+        )
+        info = float(at_velocity(evidence.velocity_km_s, evidence.target.info[0, m], velocity))
+        amplitude = raw / np.sqrt(info) if info > 0 else np.nan
+        conditional = float(at_velocity(evidence.velocity_km_s, curves.conditional[m], velocity))
+        error = _velocity_error(snr, curvature, evidence)
+        systemic = evidence.systemic_velocity_km_s
+        at_systemic = (
+            float(at_velocity(evidence.velocity_km_s, curves.solo[m], systemic))
+            if systemic is not None and evidence.velocity_km_s[0] <= systemic <= evidence.velocity_km_s[-1]
+            else np.nan
+        )
+        if index in (0, evidence.velocity_km_s.size - 1) and evidence.velocity_km_s.size > 2 and snr > 4:
+            notes.append(
+                Note(
+                    "velocity-at-edge",
+                    f"{name} peaks at the edge of the velocity range: widen [search].velocity_km_s",
+                )
+            )
+        lowest = float(np.nanmin(law.snr(curves.signal_free[m])))
+        if lowest < -4.0 - 0.5 * np.log10(max(1.0, span * np.sqrt(curvature))):
+            at = evidence.velocity_km_s[int(np.nanargmin(curves.signal_free[m]))]
+            notes.append(
+                Note(
+                    "negative-amplitude",
+                    f"{name} reaches S/N {lowest:.1f} at {at:.0f} km/s: no absorber does that",
+                )
+            )
+        results.append(
+            MoleculeResult(
+                name=name,
+                template=descriptions[m],
+                snr=snr,
+                snr_raw=raw,
+                snr_conditional=snr if len(evidence.names) == 1 else conditional,
+                snr_at_systemic=at_systemic,
+                velocity_km_s=velocity,
+                velocity_err_km_s=error,
+                amplitude=amplitude,
+                amplitude_err=law.scale / np.sqrt(info) if info > 0 else np.nan,
+                amplitude_unit=units[m],
+                p_local=p_local,
+                p_global=p_global,
+                p_global_is_extrapolated=extrapolated,
+                n_null=law.n_null,
+                nu_eff=law.nu_eff,
+                null=None if evidence.nulls is None else NullSummary(law.mean, law.std),
+                efficiency=_efficiency(law, captured),
+                masked_fraction=float(masked_fraction[m]),
+                verdict=verdict(
+                    p_global, exceeding, conditional if len(evidence.names) > 1 else snr, velocity, error,
+                    strongest, evidence.resolution_km_s,
+                ),
+                position_xy=position_xy,
+                extra={"null_exceeding": exceeding, "null_family": law.family, "psf_captured": captured},
+            )
+        )  # fmt: skip
+    return tuple(results), notes
+
+
+def _velocity_error(snr: float, curvature: float, evidence: Evidence) -> float:
+    """1 / (S/N sqrt(lambda_2)) from the template's own autocorrelation, and the zero point in quadrature."""
+    if not (snr > 0 and curvature > 0):
+        return float("nan")
+    zero = evidence.zero_point_err_km_s
+    if not np.isfinite(zero):
+        zero = ZERO_POINT_ELEMENTS * evidence.resolution_km_s
+    return float(np.hypot(1.0 / (snr * np.sqrt(curvature)), zero))
+
+
+def _efficiency(law: Calibration, captured_squares: float) -> float:
+    """Calibrated S/N over the limit of the same columns with the claimed noise and the whole PSF."""
+    return float(np.sqrt(captured_squares) / law.scale)
