@@ -2,9 +2,9 @@
 
 Why: the CO table we have is smooth, but its strength is wrong by a factor that differs with the change of
 v (measured against HITRAN 2012: +24 % for dv = 2, -10 % for dv = 1, -30 % for dv = 3), and its first lines
-carry wrong rotational factors (P(1) 1.2, P(2) 1.07, R(1) 0.9 of what they should be). One dipole function with the
-wave functions of the Rydberg-Klein-Rees potential gives every band and isotopologue, with the rotational
-dependence (Herman-Wallis factor), from five measured numbers.
+carry wrong rotational factors (P(1) 1.2, P(2) 1.07, R(1) 0.9 of what they should be). One dipole function
+with the wave functions of the Rydberg-Klein-Rees potential gives every band and isotopologue, with the
+rotational dependence (Herman-Wallis factor), from five measured numbers.
 
 Units: Angstrom, cm-1, u, Debye.
 """

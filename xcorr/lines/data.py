@@ -122,12 +122,15 @@ class PartitionTable:
     temperature_k : ndarray (n_t,)
     partition_sum : ndarray (n_isotopologue, n_t)
         NaN above the isotopologue's own limit.
+    agreed_to_k : ndarray (n_isotopologue,)
+        Temperature to which the last two releases of the source agree to 0.5 %.
     """
 
     molecule: str
     temperature_k: NDArray[np.float64]
     partition_sum: NDArray[np.float64]
     isotopologue_names: tuple[str, ...]
+    agreed_to_k: NDArray[np.float64]
     source: str
     digest: str = ""
 
@@ -180,8 +183,8 @@ class TransmissionTable:
     wavelength_um : ndarray (n_wave,)
         Vacuum, ascending.
     optical_depth : mapping of str to ndarray (n_wave,)
-        By absorber (H2O includes its continuum), at `airmass` and `water_mm`. Scaling it by a factor is Beer's
-        law on averages over a sample: good while the factor stays within about a decade.
+        By absorber (H2O includes its continuum), at `airmass` and `water_mm`. Scaling it by a factor is
+        Beer's law on averages over a sample: good while the factor stays within about a decade.
     transmission : mapping of str to ndarray (n_wave,)
         exp(-optical_depth).
     airmass, water_mm : float
@@ -302,6 +305,7 @@ def load_partition(molecule: str) -> PartitionTable:
             temperature_k=file["temperature_k"][()],
             partition_sum=file[molecule][()],
             isotopologue_names=_text(file.attrs[f"isotopologues_{molecule}"]),
+            agreed_to_k=file.attrs[f"agreed_to_k_{molecule}"],
             source=file.attrs["source"],
             digest=digest,
         )
