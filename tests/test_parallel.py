@@ -8,7 +8,7 @@ import pytest
 from threadpoolctl import threadpool_info
 
 from xcorr.errors import InputError
-from xcorr.parallel import WorkerError, map_tasks
+from xcorr.parallel import WorkerError, limited_threads, map_tasks
 
 WAYS = [{"jobs": 1}, {"jobs": 2}, {"jobs": 3}, {"jobs": 2, "threads": True}]
 
@@ -71,6 +71,18 @@ def test_stopping_early_is_no_error(way):
     results = map_tasks(fail_at_three, [0, 1, 2, 4, 5], **way)
     assert next(results) == 0
     results.close()
+
+
+def test_kernels_get_the_jobs_and_blas_gets_one():
+    import numba
+
+    before = blas_threads(0), numba.get_num_threads()
+    with limited_threads(1):
+        assert (blas_threads(0), numba.get_num_threads()) == (1, 1)
+        with limited_threads(10_000):
+            assert (blas_threads(0), numba.get_num_threads()) == (1, numba.config.NUMBA_NUM_THREADS)
+        assert numba.get_num_threads() == 1
+    assert (blas_threads(0), numba.get_num_threads()) == before
 
 
 @pytest.mark.parametrize("way", WAYS)
