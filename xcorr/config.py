@@ -144,6 +144,11 @@ class Exposure(_Table):
     star_xy: Pair | None = None
     mask_wavelength_um: tuple[Range, ...] = ()
 
+    def reading(self) -> dict[str, Any]:
+        """What `xcorr.io.read_exposure` takes besides the file: all keys but the positions."""
+        values: dict[str, Any] = self.model_dump(exclude={"file", "companion_xy", "star_xy"})
+        return values
+
     @model_validator(mode="after")
     def _one_quality_rule(self) -> Exposure:
         if self.quality_bad_bits is not None and self.quality_good_bits is not None:
@@ -207,6 +212,11 @@ class TemplateFile(_Table):
     air_formula: Literal["ciddor1996", "fits3"] = "ciddor1996"
     wavelength_unit: Name | None = None
     resolving_power: Positive | None = None
+
+    def reading(self) -> dict[str, Any]:
+        """What `xcorr.io.read_template` takes besides the file."""
+        values: dict[str, Any] = self.model_dump(exclude={"file"})
+        return values
 
 
 class Run(_Table):

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+import warnings
 from collections.abc import Mapping
 from dataclasses import dataclass
 
@@ -225,9 +226,9 @@ def _error_verdict(ratio: float, *, constant: bool) -> str:
     if ratio == 0:
         return f"the data do not scatter: smoothed or made up{tail}"
     if ratio > high:
-        return f"claimed errors are {ratio:.3g} times too small{tail}"
+        return f"claimed errors are {ratio:.3g} times smaller than the scatter of noise and lines{tail}"
     if ratio < low:
-        return f"claimed errors are {1 / ratio:.3g} times too large, or the noise is correlated{tail}"
+        return f"claimed errors are {1 / ratio:.3g} times larger than the scatter, or the noise is correlated{tail}"
     return f"claimed errors match the scatter{tail}"
 
 
@@ -241,7 +242,10 @@ def _brightest(cube: Cube, usable: NDArray[np.bool_]) -> tuple[SourceImage | Non
     mean = np.where(count > 0, np.where(finite, images, 0.0).sum(axis=0) / np.maximum(count, 1), np.nan)
     xy = find_peak(mean)
     try:
-        star = fit_star_image(wavelength, images, xy, ~(count == len(images)))
+        with warnings.catch_warnings():
+            # spaxels without any usable sample have no mean
+            warnings.filterwarnings("ignore", message="Mean of empty slice", category=RuntimeWarning)
+            star = fit_star_image(wavelength, images, xy, ~(count == len(images)))
     except InputError as error:
         return SourceImage(xy, math.nan), (Note("psf-not-measured", str(error)),)
     return SourceImage(star.star_xy, star.psf.fwhm_pixels), ()
