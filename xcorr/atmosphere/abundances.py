@@ -9,16 +9,11 @@ from xcorr.atmosphere.emission import BUILTIN_MOLECULES
 from xcorr.atmosphere.structure import grey_structure
 
 MOLECULE_FLOOR = 1e-5
-
-
-def photosphere(t_eff: float, log_g: float) -> float:
-    """Pressure, bar, where the grey structure has T = T_eff."""
-    structure = grey_structure(t_eff, log_g)
-    return float(np.exp(np.interp(t_eff, structure.temperature_k, np.log(structure.pressure_bar))))
+QUENCH_FACTOR = 1.25
 
 
 def default_mixing_ratios(t_eff: float, log_g: float) -> dict[str, float]:
-    """Equilibrium at the photosphere (T = T_eff) of solar-composition gas, for the built-in molecules.
+    """Equilibrium of solar-composition gas at the level where T = 1.25 T_eff, for the built-in molecules.
 
     Parameters
     ----------
@@ -30,7 +25,16 @@ def default_mixing_ratios(t_eff: float, log_g: float) -> dict[str, float]:
     Returns
     -------
     dict
-        Molecule -> mole fraction.
+        Molecule -> mole fraction, taken to be constant with depth.
+
+    Notes
+    -----
+    Vertical mixing freezes CO/CH4 somewhat below the photosphere; that it does is common practice, the
+    factor 1.25 is a choice without a source. The level comes from the grey structure, so the ratios depend
+    on its opacity: CO/CH4 by the square of the pressure.
     """
-    all_gases = equilibrium(t_eff, photosphere(t_eff, log_g)).as_dict()
-    return {name: all_gases[name] for name in BUILTIN_MOLECULES}
+    structure = grey_structure(t_eff, log_g)
+    level = QUENCH_FACTOR * t_eff
+    pressure = np.exp(np.interp(level, structure.temperature_k, np.log(structure.pressure_bar)))
+    gases = equilibrium(level, pressure).as_dict()
+    return {name: gases[name] for name in BUILTIN_MOLECULES}

@@ -51,7 +51,7 @@ def catalogue() -> tuple[CatalogueEntry, ...]:
             entries.append(CatalogueEntry(molecule, (low, high), lines.source, caveats))
     water = entries[0]
     collisions = "; ".join(table.source for table in load_cia().values())
-    grey = "grey temperature profile without clouds; no atoms, metal hydrides, NH3 or CO2"
+    grey = "grey temperature profile and grains; no atoms, metal hydrides, NH3 or CO2"
     full = CatalogueEntry(FULL, water.wavelength_range_um, f"the above with {collisions}", (grey,))
     return (*entries, full)
 
@@ -87,9 +87,9 @@ def builtin_template(
     log_g : float
         log10 gravity, cm s-2.
     mixing_ratios : mapping, optional
-        Molecule -> mole fraction, constant with depth. Default: `default_mixing_ratios`, where a molecule that
-        equilibrium all but removes is raised to MOLECULE_FLOOR in its *own* template (and in the full spectrum
-        that template is measured against), so that it can be looked for; `full` itself has no floor.
+        Molecule -> mole fraction, constant with depth. Default: `default_mixing_ratios`, where a molecule
+        that equilibrium all but removes is raised to MOLECULE_FLOOR in its *own* template (and in the full
+        spectrum that template is measured against), so that it can be looked for; `full` has no floor.
     form : str
         ``"contribution"``, or ``"alone"``: the spectrum of this molecule and H2-He only.
     n_layers : int
@@ -111,7 +111,7 @@ def builtin_template(
     """
     low, high = _check(name, wavelength_range_um, form)
     t_eff = float(to_plain(t_eff, "K"))
-    chosen = None if mixing_ratios is None else {key: float(value) for key, value in mixing_ratios.items()}
+    chosen = None if mixing_ratios is None else {key: float(each) for key, each in mixing_ratios.items()}
     ratios = default_mixing_ratios(t_eff, log_g) if chosen is None else chosen
     if name != FULL and chosen is not None and not ratios.get(name, 0.0) > 0.0:
         raise SettingsError(

@@ -10,7 +10,6 @@ from numpy.typing import NDArray
 from xcorr.errors import InputError
 
 ADIABATIC_GRADIENT = 2.0 / 7.0  # dlnT/dlnP of a gas of rigid diatomic molecules
-TOP_BAR, BOTTOM_BAR = 1e-5, 300.0
 _FINE = 2000  # integration steps of the optical depth; layers are read off this
 
 
@@ -85,13 +84,30 @@ def rosseland_opacity(temperature_k: NDArray | float, pressure_bar: NDArray | fl
     return 10.0**low + 10.0**high
 
 
+def grain_opacity(t_eff: float) -> float:
+    """Grey opacity of condensates, cm2 / g: none up to 1200 K, 0.05 from 1500 K, linear between.
+
+    Notes
+    -----
+    That clouds lie in the photospheres of L dwarfs and below those of T dwarfs is common practice, no source;
+    the value puts the photosphere of a 1600 K, log g 5 atmosphere near 1 bar instead of 5, where equilibrium
+    would leave enough methane to dominate the K band, against what L dwarfs show.
+    """
+    return float(np.interp(t_eff, (1200.0, 1500.0), (0.0, 0.05)))
+
+
+def default_pressures(log_g: float) -> tuple[float, float]:
+    """First and last boundary, bar: 1e-5 and 300, lowered with gravity below log g 3 and 4."""
+    return 1e-5 * 10.0 ** min(0.0, log_g - 3.0), 300.0 * 10.0 ** min(0.0, log_g - 4.0)
+
+
 def grey_structure(
     t_eff: float,
     log_g: float,
     *,
     n_layers: int = 60,
-    top_bar: float = TOP_BAR,
-    bottom_bar: float = BOTTOM_BAR,
+    grains_cm2_g: float | None = None,
+    pressures_bar: tuple[float, float] | None = None,
 ) -> Structure:
     """Hydrostatic grey atmosphere, convective where the radiative gradient would be steeper.
 
@@ -103,8 +119,10 @@ def grey_structure(
         Surface gravity, log10 cm s-2.
     n_layers : int
         Layers equally spaced in log pressure, at least 10.
-    top_bar, bottom_bar : float
-        Pressures of the first and the last boundary.
+    grains_cm2_g : float, optional
+        Grey opacity added to that of the gas; default `grain_opacity`.
+    pressures_bar : (top, bottom), optional
+        First and last boundary; default `default_pressures`.
 
     Returns
     -------
@@ -113,40 +131,48 @@ def grey_structure(
     Raises
     ------
     InputError
-        For values outside 300-4000 K, log g 2-6, or fewer than 10 layers.
+        For values outside 300-4000 K, log g 0-6, or fewer than 10 layers.
 
     Notes
     -----
-    The optical depth is that of the Rosseland mean of grain-free solar-composition gas
-    (`rosseland_opacity`). Gradient: dlnT/dlnP = min[(3/16) kappa P / g (T_eff/T)^4, 2/7]; the first is
-    dT^4 = (3/4) T_eff^4 dtau, so that T(tau) is Eddington's above the convective zone. Real atmospheres
-    are not grey: their upper layers are cooler than 0.84 T_eff, and grains heat those of warm dwarfs.
+    The optical depth is that of the Rosseland mean of solar-composition gas (`rosseland_opacity`) and grains.
+    Gradient: dlnT/dlnP = min[(3/16) kappa P / g (T_eff/T)^4, 2/7]; the first is dT^4 = (3/4) T_eff^4 dtau,
+    so that T(tau) is Eddington's above the convective zone. Real atmospheres are not grey: their upper
+    layers are cooler than 0.84 T_eff, and strong lines deeper.
     """
-    if not 300.0 <= t_eff <= 4000.0:
-        raise InputError(
-            "t_eff is outside 300-4000 K", f"{t_eff:g}", "give an effective temperature in range"
-        )
-    if not 2.0 <= log_g <= 6.0:
-        raise InputError("log_g is outside 2-6", f"{log_g:g}", "give log10 of the gravity in cm s-2")
-    if n_layers < 10:
-        raise InputError("too few layers", f"{n_layers}", "use at least 10 (50 or more for science)")
-    if not 0.0 < top_bar < bottom_bar:
-        raise InputError("the top pressure must be positive and below the bottom", f"{top_bar}, {bottom_bar}")
-    log_pressure = np.linspace(np.log(top_bar), np.log(bottom_bar), _FINE + 1)
+    top, bottom = _check_structure(t_eff, log_g, n_layers, pressures_bar)
+    grains = grain_opacity(t_eff) if grains_cm2_g is None else grains_cm2_g
+    log_pressure = np.linspace(np.log(top), np.log(bottom), _FINE + 1)
     step = log_pressure[1] - log_pressure[0]
-    gravity = 10.0**log_g
+    # dtau / dlnP per unit of opacity, and the Eddington gradient's constants
+    scale = 3.0 / 16.0 * 1e6 / 10.0**log_g * t_eff**4
 
     def gradient(ln_p: float, ln_t: float) -> float:
         pressure, temperature = np.exp(ln_p), np.exp(ln_t)
-        opacity = rosseland_opacity(temperature, pressure)
-        radiative = 3.0 / 16.0 * opacity * pressure * 1e6 / gravity * (t_eff / temperature) ** 4
-        return min(float(radiative), ADIABATIC_GRADIENT)
+        opacity = float(rosseland_opacity(temperature, pressure)) + grains
+        return min(scale * opacity * pressure / temperature**4, ADIABATIC_GRADIENT)
 
-    ln_t = np.empty(_FINE + 1)
     skin = eddington_temperature(t_eff, 0.0)
-    ln_t[0] = np.log(eddington_temperature(t_eff, rosseland_opacity(skin, top_bar) * top_bar * 1e6 / gravity))
+    above = (rosseland_opacity(skin, top) + grains) * top * 1e6 / 10.0**log_g
+    ln_t = np.empty(_FINE + 1)
+    ln_t[0] = np.log(eddington_temperature(t_eff, above))
     for k in range(_FINE):
         half = ln_t[k] + 0.5 * step * gradient(log_pressure[k], ln_t[k])
         ln_t[k + 1] = ln_t[k] + step * gradient(log_pressure[k] + 0.5 * step, half)
     boundary = np.linspace(log_pressure[0], log_pressure[-1], n_layers + 1)
     return Structure(np.exp(boundary), np.exp(np.interp(boundary, log_pressure, ln_t)), log_g)
+
+
+def _check_structure(
+    t_eff: float, log_g: float, n_layers: int, pressures_bar: tuple[float, float] | None
+) -> tuple[float, float]:
+    if not 300.0 <= t_eff <= 4000.0:
+        raise InputError("t_eff is outside 300-4000 K", f"{t_eff:g}", "give a temperature in range")
+    if not 0.0 <= log_g <= 6.0:
+        raise InputError("log_g is outside 0-6", f"{log_g:g}", "give log10 of the gravity in cm s-2")
+    if n_layers < 10:
+        raise InputError("too few layers", f"{n_layers}", "use at least 10 (50 or more for science)")
+    top, bottom = default_pressures(log_g) if pressures_bar is None else pressures_bar
+    if not 0.0 < top < bottom:
+        raise InputError("the top pressure must be positive and below the bottom", f"{top}, {bottom}")
+    return top, bottom

@@ -68,7 +68,7 @@ def cross_section(
     broadening : Broadening, optional
         Default: `default_broadening`, for a gas of 85 % H2 and 15 % He.
     wing_cm : float
-        A line is cut at this distance from its centre, cm-1, without renormalising. 25 cm-1 is common practice.
+        A line is cut at this distance from its centre, cm-1, without renormalising (25: common practice).
 
     Returns
     -------
