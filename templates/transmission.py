@@ -1,7 +1,7 @@
 """The Earth's transmission by absorber, and the cold methane cross section it implies.
 
 The input is a slant path through very humid air. The columns were measured with line lists (README):
-CH4 5.3e19 cm-2 and CO 3.7e18 cm-2 make an airmass of 1.4, H2O 3.6e23 cm-2 makes 108 mm of water. We ship
+CH4 5.3e19 cm-2 and CO 3.7e18 cm-2 make an airmass of 1.4, H2O 3.3e23 cm-2 makes 100 mm of water. We ship
 optical depths scaled to airmass 1 and 2 mm of water, so that users scale by factors near one.
 """
 
@@ -16,7 +16,7 @@ from sources import provenance, read_member, sha256
 COLUMNS = ("wavelength", "total", "H2O", "CO2", "O3", "N2O", "CO", "CH4", "O2", "N2", "Rayleigh", "continuum")
 SHIPPED = ("H2O", "CO2", "O3", "N2O", "CO", "CH4", "O2", "Rayleigh")
 INPUT_AIRMASS = 1.4
-INPUT_WATER_MM = 108.0  # along the slant path
+INPUT_WATER_MM = 100.0  # along the slant path
 SHIPPED_WATER_MM = 2.0  # at zenith
 SLANT_METHANE_PER_CM2 = 5.3e19
 METHANE_K = 260.0
@@ -50,8 +50,9 @@ def build_transmission(columns: dict[str, np.ndarray], data: bytes, out: Path) -
     depth = {name: optical_depth(columns[name]) / INPUT_AIRMASS for name in SHIPPED}
     # What the input calls CIA follows the water bands: the water continuum of humid air. Its part that goes
     # with the square of the water is scaled linearly with the rest and so is overestimated in dry air.
-    water = optical_depth(columns["H2O"]) + optical_depth(columns["continuum"])
-    depth["H2O"] = water * (SHIPPED_WATER_MM / INPUT_WATER_MM)
+    dry = SHIPPED_WATER_MM / INPUT_WATER_MM
+    continuum = optical_depth(columns["continuum"]) * dry
+    depth["H2O"] = optical_depth(columns["H2O"]) * dry + continuum
     tables = {"wavelength_um": (columns["wavelength"], "um", "vacuum wavelength")}
     for name in SHIPPED:
         tables[f"optical_depth/{name}"] = (
@@ -59,6 +60,7 @@ def build_transmission(columns: dict[str, np.ndarray], data: bytes, out: Path) -
             "",
             "at airmass 1 and the reference water",
         )
+    tables["water_continuum"] = (significant(continuum, 4), "", "its part of optical_depth/H2O")
     attributes = {
         "source": SOURCE,
         "input": provenance("transmission"),
@@ -69,7 +71,7 @@ def build_transmission(columns: dict[str, np.ndarray], data: bytes, out: Path) -
         "input_water_slant_mm": INPUT_WATER_MM,
         "resolving_power": 1e5,
         "medium": "vacuum (checked on H2O and CO lines)",
-        "notes": "scaled from 108 mm of water along airmass 1.4; H2O includes its continuum; lines carry the "
+        "notes": "scaled from 100 mm of water along airmass 1.4; H2O includes its continuum; lines carry the "
         "pressure shifts of the air (up to -0.4 km/s)",
     }
     write_tables(out / "transmission.h5", attributes, tables)

@@ -185,6 +185,8 @@ class TransmissionTable:
     optical_depth : mapping of str to ndarray (n_wave,)
         By absorber (H2O includes its continuum), at `airmass` and `water_mm`. Scaling it by a factor is
         Beer's law on averages over a sample: good while the factor stays within about a decade.
+    water_continuum : ndarray (n_wave,)
+        The smooth part of the optical depth of H2O.
     transmission : mapping of str to ndarray (n_wave,)
         exp(-optical_depth).
     airmass, water_mm : float
@@ -193,6 +195,7 @@ class TransmissionTable:
 
     wavelength_um: NDArray[np.float64]
     optical_depth: MappingProxyType[str, NDArray[np.float64]]
+    water_continuum: NDArray[np.float64]
     airmass: float
     water_mm: float
     source: str
@@ -338,10 +341,12 @@ def load_transmission_table() -> TransmissionTable:
     with file:
         wavelength = file["wavelength_um"][()]
         depth = {name: data[()].astype(np.float64) for name, data in file["optical_depth"].items()}
+        continuum = file["water_continuum"][()].astype(np.float64)
         head = dict(file.attrs)
     return TransmissionTable(
         wavelength_um=wavelength,
         optical_depth=MappingProxyType(depth),
+        water_continuum=continuum,
         airmass=float(head["airmass"]),
         water_mm=float(head["water_mm"]),
         source=head["source"],
