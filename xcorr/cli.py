@@ -84,7 +84,7 @@ def main(arguments: Sequence[str] | None = None) -> int:
     previous = _on_terminate(_raise_terminated)
     try:
         return _run(arguments)
-    except (KeyboardInterrupt, click.Abort):
+    except KeyboardInterrupt:
         print("xcorr: interrupted; nothing was left behind", file=sys.stderr)
         return INTERRUPTED
     except Terminated:
@@ -98,8 +98,12 @@ def main(arguments: Sequence[str] | None = None) -> int:
 def _run(arguments: list[str]) -> int:
     debug = "--debug" in arguments
     try:
-        cli.main(args=arguments, prog_name="xcorr", standalone_mode=False)
+        # Not cli.main(): that turns KeyboardInterrupt into an error of its own.
+        with cli.make_context("xcorr", list(arguments)) as context:
+            cli.invoke(context)
         sys.stdout.flush()
+    except click.exceptions.Exit as end:
+        return end.exit_code
     except click.UsageError as error:
         command = error.ctx.command_path if error.ctx else "xcorr"
         typed = shlex.join(["xcorr", *arguments])

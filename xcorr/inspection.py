@@ -228,7 +228,7 @@ def _error_verdict(ratio: float, *, constant: bool) -> str:
     if ratio > high:
         return f"claimed errors are {ratio:.3g} times smaller than the scatter of noise and lines{tail}"
     if ratio < low:
-        return f"claimed errors are {1 / ratio:.3g} times larger than the scatter, or the noise is correlated{tail}"
+        return f"claimed errors are {1 / ratio:.3g} times larger than the scatter; correlated noise?{tail}"
     return f"claimed errors match the scatter{tail}"
 
 

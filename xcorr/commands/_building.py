@@ -11,7 +11,7 @@ from functools import partial
 from pathlib import Path
 from typing import Any
 
-from xcorr.errors import CoverageError, OutputError
+from xcorr.errors import CoverageError, OutputError, SettingsError
 from xcorr.parallel import map_tasks
 from xcorr.provenance import sha256_of_file, versions
 
@@ -35,7 +35,15 @@ class Request:
         """A request without repetitions; no names means all built-in ones."""
         from xcorr.atmosphere import catalogue
 
-        chosen = names or tuple(entry.name for entry in catalogue())
+        known = tuple(entry.name for entry in catalogue())
+        if unknown := [name for name in names if name not in known]:
+            raise SettingsError("no built-in template of that name", unknown[0], f"use {', '.join(known)}")
+        low, high = wavelength_range_um
+        if not 0 < low < high:
+            raise SettingsError(
+                "--range must be two positive ascending wavelengths", f"{low:g} {high:g}", "in um"
+            )
+        chosen = names or known
         unique = [tuple(dict.fromkeys(values)) for values in (chosen, t_eff, log_g)]
         return cls(unique[0], wavelength_range_um, unique[1], unique[2])
 
@@ -57,6 +65,7 @@ def build_templates(request: Request, out: Path, *, overwrite: bool, jobs: int) 
         `out` holds something else, or the templates of another request, and `overwrite` is off.
     """
     done = _done(request, out, overwrite)
+    fresh = not out.exists()
     shards = out / "shards"
     shards.mkdir(parents=True, exist_ok=True)
     points = request.points()
@@ -64,12 +73,17 @@ def build_templates(request: Request, out: Path, *, overwrite: bool, jobs: int) 
     entries: dict[str, str] = {}
     results = map_tasks(partial(_build_point, request, shards, done), points, jobs=jobs, labels=labels)
     for label, made in zip(labels, results, strict=True):
+        if not made:
+            continue
         entries |= made
         # Finished points of an earlier, longer run stay in the manifest.
         _write_manifest(request, out, done | entries)
         log.info("%s: %d templates", label, len(made))
         yield from made
     if not entries:
+        shards.rmdir()
+        if fresh:
+            out.rmdir()
         raise CoverageError(
             "nothing could be built", "no template covers the range", "see xcorr templates list"
         )
