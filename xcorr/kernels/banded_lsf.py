@@ -90,7 +90,7 @@ def shift_and_multiply(
         shift = shifts[column]
         for k in range(position.size):
             place = position[k] - shift
-            i = min(max(int(math.floor(place)), 1), last)
+            i = min(max(math.floor(place), 1), last)
             f = min(max(place - i, -1.0), 2.0)
             f_minus, f_plus, f_two = f - 1.0, f + 1.0, f - 2.0
             value = f_plus * f_two * f_minus * 0.5 * flux[i] - f_plus * f * f_two * 0.5 * flux[i + 1]
@@ -147,7 +147,7 @@ def rotation_gather(
     epsilon,  # linear limb darkening
     out,  # (n,)
 ):
-    """Convolution with Gray's rotation profile, integrated over each sample's cell; renormalised at the ends."""
+    """Convolution with Gray's rotation profile integrated over each sample's cell; renormalised at the ends."""
     first = 0
     for j in range(wavelength.size):
         centre = wavelength[j]

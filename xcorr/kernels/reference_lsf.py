@@ -2,7 +2,10 @@
 
 from __future__ import annotations
 
+from itertools import pairwise
+
 import numpy as np
+from scipy.integrate import quad
 from scipy.special import ndtr
 
 
@@ -62,15 +65,12 @@ def rotation_profile(x, epsilon):
     return profile / (np.pi * (1.0 - epsilon / 3.0))
 
 
-def rotation_convolution(wavelength, flux, beta, epsilon, oversampling=200):
-    """(n,) rotation by direct quadrature of G over the piecewise-constant flux."""
+def rotation_convolution(wavelength, flux, beta, epsilon):
+    """(n,) rotation of the piecewise-constant flux, each weight by adaptive quadrature of G over its cell."""
     out = np.empty_like(flux)
-    x = (np.arange(-oversampling, oversampling) + 0.5) / oversampling
-    profile = rotation_profile(x, epsilon)
-    bounds = 0.5 * (wavelength[1:] + wavelength[:-1])
+    bounds = np.concatenate([wavelength[:1], 0.5 * (wavelength[1:] + wavelength[:-1]), wavelength[-1:]])
     for j, centre in enumerate(wavelength):
-        place = centre * (1.0 + beta * x)
-        inside = (place >= wavelength[0]) & (place <= wavelength[-1])
-        values = flux[np.searchsorted(bounds, place)]
-        out[j] = np.sum(profile[inside] * values[inside]) / profile[inside].sum()
+        x = np.clip((bounds - centre) / (centre * beta), -1.0, 1.0)
+        weight = np.array([quad(rotation_profile, *cell, args=(epsilon,))[0] for cell in pairwise(x)])
+        out[j] = weight @ flux / weight.sum()
     return out

@@ -1,4 +1,4 @@
-"""Spectral tools: grids, air and vacuum, Doppler shifts, line-spread functions, channels, barycentric velocity."""
+"""Spectral tools: grids, air and vacuum, Doppler, barycentric velocity, line-spread functions, channels."""
 
 from xcorr.spectral.air import air_to_vacuum, vacuum_to_air
 from xcorr.spectral.barycentric import barycentric_velocity

@@ -84,10 +84,10 @@ def rotational_broadening(
     """Broaden a spectrum by rotation with Gray's profile and linear limb darkening.
 
     Gray, The Observation and Analysis of Stellar Photospheres, ch. 18: with x = c dlambda / (lambda v sin i),
-    G(x) = [2 (1 - eps) sqrt(1 - x^2) + (pi eps / 2)(1 - x^2)] / [pi (1 - eps / 3)]. The profile is integrated over
-    the cell of each sample, which adds h^2/12 to its variance (h the sample step); an unresolved
-    rotation leaves the spectrum as it is. Rotation is applied as a convolution: limb darkening does not vary with
-    wavelength.
+    G(x) = [2 (1 - eps) sqrt(1 - x^2) + (pi eps / 2)(1 - x^2)] / [pi (1 - eps / 3)].
+
+    The profile is integrated over the cell of each sample, which adds h^2/12 to its variance (h the sample
+    step); an unresolved rotation leaves the spectrum as it is. Limb darkening does not vary with wavelength.
 
     Parameters
     ----------

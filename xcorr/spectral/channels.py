@@ -125,8 +125,8 @@ def edge_pairs(edges: Any) -> NDArray[np.float64]:
 def to_channels(wavelength_hi: Any, flux: ArrayLike, edges: Any) -> NDArray[np.float64]:
     """Mean of a spectrum over each pixel; conserves flux.
 
-    The integral of the piecewise-linear spectrum is exact: summed over adjoining pixels, mean times width equals
-    the trapezoid integral of the input.
+    The integral of the piecewise-linear spectrum is exact: summed over adjoining pixels, mean times width
+    equals the trapezoid integral of the input.
 
     Parameters
     ----------

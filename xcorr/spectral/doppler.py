@@ -1,7 +1,7 @@
 """Doppler factors: relativistic velocities that compose, and the barycentric factor.
 
-Velocities of objects are relativistic, positive receding: 1 + z = sqrt((1 + v/c) / (1 - v/c)). The barycentric
-velocity is stored as z_B * c (as astropy returns it), so its factor is 1 + v_B/c.
+Velocities of objects are relativistic, positive receding: 1 + z = sqrt((1 + v/c) / (1 - v/c)). The
+barycentric velocity is stored as z_B * c (as astropy returns it), so its factor is 1 + v_B/c.
 """
 
 from __future__ import annotations
@@ -91,8 +91,8 @@ def compose_velocities(first_km_s: Any, second_km_s: Any) -> NDArray[np.float64]
 def observed_velocity(velocity_km_s: Any, barycentric_velocity_km_s: float) -> NDArray[np.float64]:
     """Velocity seen from the observatory of an object with a barycentric velocity.
 
-    (1 + z_obs) = (1 + z_bary) / (1 + z_B), with z_B = barycentric_velocity / c the value to *add* to a measured
-    velocity (Wright & Eastman 2014, PASP 126, 838).
+    (1 + z_obs) = (1 + z_bary) / (1 + z_B), with z_B = barycentric_velocity / c the value to *add* to a
+    measured velocity (Wright & Eastman 2014, PASP 126, 838).
 
     Parameters
     ----------

@@ -1,4 +1,4 @@
-"""The line-spread operator: from a fine grid to channels, resolution and pixel integration in one banded product."""
+"""The line-spread operator: fine grid to channels, resolution and pixel integration in one banded product."""
 
 from __future__ import annotations
 
@@ -23,9 +23,9 @@ COLUMNS_PER_BLOCK = 8
 class LsfOperator:
     """channel{ LSF (x) spectrum } as a banded matrix; made by `LsfOperator.build`.
 
-    Row j holds the normalised Gaussian LSF (FWHM = lambda_j / R_j) convolved with pixel j, at the samples of the
-    fine grid with trapezoid weights, out to five sigma beyond the pixel. R may differ by channel; several orders
-    are simply more rows.
+    Row j holds the normalised Gaussian LSF (FWHM = lambda_j / R_j) convolved with pixel j, at the samples of
+    the fine grid with trapezoid weights, out to five sigma beyond the pixel. R may differ by channel; several
+    orders are simply more rows.
 
     Attributes
     ----------
@@ -152,9 +152,9 @@ class LsfOperator:
         return out[0] if flux.ndim == 1 else out
 
     def derivative_resolving_power(self) -> LsfOperator:
-        """The operator d/dR: its product with a spectrum is the change of each channel per unit of that channel's R.
+        """The operator d/dR: its product with a spectrum is the change of each channel per unit of its R.
 
-        First-order correction: t(R + dR) = t(R) + dR * (dt/dR).
+        First-order correction: t(R + dR) = t(R) + dR * (dt/dR), for instance where R differs by spaxel.
         """
         lengths = np.diff(self.offsets)
         scale = np.repeat(1.0 / self.resolving_power, lengths)

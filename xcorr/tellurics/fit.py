@@ -16,8 +16,8 @@ from xcorr.tellurics.solve import Solution, solve
 from xcorr.tellurics.types import Array, TelluricFit, TransmissionTable
 from xcorr.units import LIGHT_KM_S, to_plain
 
-KNOT_SPACING = 0.012
-"""Spacing of the continuum splines in ln(wavelength): 3600 km/s, wider than stellar lines."""
+KNOT_SPACING = 0.02
+"""Spacing of the continuum splines in ln(wavelength): 6000 km/s, wider than the hydrogen lines of A stars."""
 FINE_GRID_R = 300_000.0
 """Sampling of the transmission handed on (the rule for line-by-line work is 200,000 or more)."""
 VELOCITY_NOTE_KM_S = 10.0
@@ -62,7 +62,7 @@ def fit_transmission(
     frame_velocity_km_s : float
         Where the tellurics are expected: 0 in the observatory frame, z_B * c in a barycentric one.
     knots : int, optional
-        Number of continuum splines in all; by default one per 0.012 in ln(wavelength).
+        Number of continuum splines in all; by default one per 0.02 in ln(wavelength).
     wavelength_hi_um : array_like (n_hi,), optional
         Grid of the transmission to hand on; by default constant in ln(wavelength) at R = 300,000 over the
         channels and beyond them by 0.5 % or eight FWHM.

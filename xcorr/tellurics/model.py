@@ -80,7 +80,7 @@ def optical_depths(table: TransmissionTable, star: Star) -> Depths:
 
 
 def operator_at(star: Star, depths: Depths, beta: float, scale: float) -> LsfOperator:
-    """Operator at a velocity: the channels are shifted back, not the transmission forth, so nothing is interpolated."""
+    """Operator at a velocity: channels are shifted back, not T forth, so that nothing is interpolated."""
     factor = float(doppler_factor(beta * LIGHT_KM_S))
     return LsfOperator.build(
         depths.wavelength, star.wavelength / factor, star.resolving * scale, edges_um=star.edges / factor

@@ -46,7 +46,7 @@ class Solution:
 
 
 def coarse_start(star: Star, depths: Depths, root_weight: Array) -> FitParameters:
-    """Best of a grid of velocities and water columns, by the mean absolute residual: stellar lines matter little."""
+    """Best of a grid of velocities and water columns, by the mean absolute residual (robust to lines)."""
     step = LIGHT_KM_S / float(np.median(star.resolving)) / 3.0
     n_side = int(np.ceil(SEARCH_KM_S / step))
     waters = np.exp(np.linspace(np.log(0.1), np.log(10.0), 7))

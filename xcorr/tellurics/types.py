@@ -49,8 +49,8 @@ class TelluricFit:
     transmission_hi : float64 array (n_hi,)
         Line-by-line transmission on it, shifted by frame and fitted velocity. Ones where not usable.
     transmission_channels : float64 array (n_wave,)
-        LSF (x) T in the channels. Where not usable: star / continuum, the fallback to be multiplied in after the
-        LSF, 0 where masked.
+        LSF (x) T in the channels. Where not usable: star / continuum, the fallback to be multiplied in after
+        the LSF, 0 where masked.
     continuum : float64 array (n_wave,)
         c, the smooth ratio of the star to LSF (x) T, with stellar lines bridged.
     weights : float64 array (n_wave,)
