@@ -167,7 +167,7 @@ class CiaTable:
         _freeze(self)
 
     def coefficient_cm5(self) -> NDArray[np.float64]:
-        """Coefficients in cm5 molecule-2 (CHECKS: 1 cm-1 amagat-2 = 1.38527e-39 cm5)."""
+        """Coefficients in cm5 molecule-2 (1 cm-1 amagat-2 = 1.38527e-39 cm5)."""
         return self.coefficient / AMAGAT_PER_CM3**2
 
 
