@@ -8,6 +8,7 @@ from pathlib import Path
 import h5py
 import numpy as np
 import pytest
+from threadpoolctl import threadpool_limits
 
 from xcorr.errors import InputError
 from xcorr.lines.data import load_lines
@@ -153,19 +154,20 @@ def test_co_rotational_dependence_against_hitran(co_pairs):
     assert np.percentile(np.abs(ratio[strong] - 1), 90) < 0.01
 
 
-def load_theory():
-    """The script behind the CO strengths, from the templates folder."""
+@pytest.fixture(scope="module")
+def theory():
+    """The script behind the CO strengths; one BLAS thread, because its matrices are small."""
     path = data_path("templates", "co_theory.py")
     spec = importlib.util.spec_from_file_location("co_theory_under_test", path)
     module = importlib.util.module_from_spec(spec)
     sys.modules[spec.name] = module
     spec.loader.exec_module(module)
-    return module
+    with threadpool_limits(1):
+        yield module
 
 
-def test_co_dipole_function_predicts_what_it_was_not_given(co_pairs):
+def test_co_dipole_function_predicts_what_it_was_not_given(theory):
     """2-1 and the isotopologues' 1-0 bands follow from the 12C16O bands 1-0 to 4-0 (HITRAN 2012 sums)."""
-    theory = load_theory()
     dipole = np.array(theory.dipole_function())
     assert theory.equilibrium() == pytest.approx(1.128323, abs=2e-6)  # Huber & Herzberg 1979, Angstrom
     for isotopologue, band, published in (
@@ -177,9 +179,8 @@ def test_co_dipole_function_predicts_what_it_was_not_given(co_pairs):
         assert total == pytest.approx(published, rel=0.005)
 
 
-def test_co_wave_equation_returns_the_term_values():
+def test_co_wave_equation_returns_the_term_values(theory):
     """The potential is right if its levels are the Dunham sums it came from (first-order inversion)."""
-    theory = load_theory()
     energies, _ = theory.wave_functions(1)
     v = np.arange(12)
     for j, tolerance in ((0, 0.02), (30, 0.1)):
