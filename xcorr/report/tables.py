@@ -11,18 +11,18 @@ _DASH = "-"
 
 
 def rounded(value: float, error: float) -> tuple[str, str]:
-    """A value and its error to the same decimal, the error with two digits where it begins with 1, else one.
-
-    Common practice, no source.
+    """A value and its error to the same decimal, the error with two significant digits.
 
     Examples
     --------
     >>> rounded(23.456, 1.234)
     ('23.5', '1.2')
     >>> rounded(0.000123456, 0.00000987)
-    ('0.000123', '0.000010')
-    >>> rounded(1234.5, 56.0)
-    ('1230', '60')
+    ('0.0001235', '0.0000099')
+    >>> rounded(1234.5, 567.0)
+    ('1230', '570')
+    >>> rounded(0.5, 0.0996)
+    ('0.50', '0.10')
     >>> rounded(-7.0, float("nan"))
     ('-7.00', '-')
     """
@@ -30,10 +30,10 @@ def rounded(value: float, error: float) -> tuple[str, str]:
         return _DASH, _DASH
     if not math.isfinite(error) or error <= 0:
         return significant(value, 3), _DASH
-    exponent = math.floor(math.log10(error))
-    decimals = -exponent + (1 if error / 10**exponent < 1.95 else 0)
-    # round() also takes negative places: 1234.5 +- 56 is 1230 +- 60.
+    # rounding can add a digit (0.0996 -> 0.10): count decimals after it
+    decimals = 1 - math.floor(math.log10(float(f"{error:.1e}")))
     places = max(decimals, 0)
+    # round() also takes negative places: 1234.5 +- 567 is 1230 +- 570
     return f"{round(value, decimals):.{places}f}", f"{round(error, decimals):.{places}f}"
 
 
