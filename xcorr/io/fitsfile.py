@@ -23,7 +23,7 @@ from xcorr.errors import InputError
 BLOCK = 2880
 _CARD = 80
 _MAX_HEADER_BLOCKS = 4000
-_SLAB_BYTES = 1 << 23
+_SLAB_BYTES = 1 << 21
 _DTYPES = {8: ">u1", 16: ">i2", 32: ">i4", 64: ">i8", -32: ">f4", -64: ">f8"}
 # what astropy and the standard library raise on damaged bytes
 FITS_FAULTS = (OSError, ValueError, TypeError, KeyError, IndexError, EOFError, zlib.error, OverflowError)

@@ -14,7 +14,7 @@ _MIN_COMMON = 8  # channels two spaxels must share before they can be called equ
 _CONSTANT = 1e-3  # relative spread of a constant error plane
 # claimed errors below these fractions of the scatter from channel to channel cannot be meant
 _ABSURD, _ABSURD_VARYING = 1e-2, 1e-3
-_NEAR = 5.0  # factor within which errors "fit" the scatter
+_NEAR = 20.0  # factor within which errors "fit": resampled data scatter several times less than they should
 
 
 def mask_duplicates(samples: Samples) -> int:
@@ -65,8 +65,8 @@ def drop_absurd_errors(samples: Samples) -> None:
     """Forget a claimed error plane that lies far below what the data show.
 
     The scatter is the robust scatter of second differences along wavelength in the quietest tenth of the
-    spaxels (of the only one in a spectrum): noise plus structure. A constant plane below a hundredth of it, or
-    one whose largest value is below a thousandth, is no error of these data.
+    spaxels (of the only one in a spectrum): noise plus structure. A constant plane below a hundredth of it,
+    or one whose largest value is below a thousandth, is no error of these data.
     """
     low, high = samples.sigma_range
     if samples.variance is None:
@@ -78,8 +78,8 @@ def drop_absurd_errors(samples: Samples) -> None:
     samples.variance = None
     found = f"the constant {high:.3g}" if constant else f"{low:.3g} to {high:.3g}"
     message = (
-        f"the error plane holds {found}, at least {scatter / high:.3g} times less than the scatter of the data"
-        f" from channel to channel ({scatter:.3g}): ignored, noise to be estimated"
+        f"the error plane holds {found}, at least {scatter / high:.3g} times less than the scatter of the"
+        f" data from channel to channel ({scatter:.3g}): ignored, noise to be estimated"
     )
     typical = math.sqrt(math.sqrt(low * high))
     if scatter / _NEAR < typical < scatter * _NEAR:

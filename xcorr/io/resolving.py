@@ -69,9 +69,8 @@ def _from_file(
     cube = _cube_of_r(file, shape)
     if cube is not None:
         return cube
-    columns = read_columns(file, wavelength_unit="um", medium="vacuum", need_flux=False)
-    blocks = columns.blocks
-    block = blocks[0]
+    columns = read_columns(file, fallback_unit="um", fallback_medium="vacuum", need_flux=False)
+    block = columns.blocks[0]
     values = block.resolving if block.resolving is not None else block.flux
     if values is None:
         raise InputError("resolving power file has no second column", file.name, "write wavelength and R")

@@ -112,7 +112,8 @@ def _usable(block: Block) -> NDArray[np.bool_]:
 def _merge(blocks: tuple[Block, ...]) -> tuple[Floats, Floats, Floats | None, NDArray[np.bool_], int]:
     """(wavelength, flux, reference, covered, number of gaps) of all orders.
 
-    Orders are sorted and cut at the middle of their overlaps. The samples on both sides of a gap are marked as not covered, so that no interpolation bridges it.
+    Orders are sorted and cut at the middle of their overlaps. The samples on both sides of a gap are marked
+    as not covered, so that no interpolation bridges it.
     """
     orders = sorted((b for b in blocks if b.wavelength.size > 1), key=lambda b: float(b.wavelength[0]))
     if not orders:
