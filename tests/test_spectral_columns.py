@@ -154,3 +154,19 @@ def test_bad_input():
         shifted_columns(operator, grid, np.full(grid.size, np.nan), 0.0)
     with pytest.raises(InputError, match="factor must lie"):
         shifted_columns(operator, grid, np.ones(grid.size), 0.0, multiply=np.ones(3))
+
+
+def test_a_template_far_wider_than_the_data_or_beside_it():
+    grid = log_grid(2.20, 2.34, 300_000)
+    operator = LsfOperator.build(grid, CHANNELS, 4000.0)
+    wide = np.linspace(1.5, 3.0, 150_000)
+    narrow = wide[(wide > 2.19) & (wide < 2.35)]
+    for v in (-900.0, 0.0, 900.0):
+        np.testing.assert_allclose(
+            shifted_columns(operator, wide, spectrum(wide, 30.0), v),
+            shifted_columns(operator, narrow, spectrum(narrow, 30.0), v),
+            rtol=1e-6,
+        )
+    beside = np.linspace(1.0, 1.1, 1000)
+    np.testing.assert_allclose(shifted_columns(operator, beside, beside, 0.0), 1.1, rtol=1e-9)
+    assert not np.any(covered_channels(operator, beside, 0.0))

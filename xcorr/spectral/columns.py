@@ -19,17 +19,27 @@ from xcorr.units import FWHM_PER_SIGMA
 
 
 def _log_template(
-    wavelength_um: NDArray[np.float64], flux: NDArray[np.float64], fallback_step: float
+    wavelength_um: NDArray[np.float64],
+    flux: NDArray[np.float64],
+    fallback_step: float,
+    needed: tuple[float, float],
 ) -> tuple[float, float, NDArray[np.float64]]:
-    """(ln of the first wavelength, ln step, flux) on a log grid; as it is where the grid already is one."""
+    """(ln of the first wavelength, ln step, flux) on a log grid, resampled where needed unless it is one."""
     logarithm = np.log(wavelength_um)
     step = np.diff(logarithm)
     mean = (logarithm[-1] - logarithm[0]) / step.size
     if np.max(np.abs(logarithm - logarithm[0] - mean * np.arange(logarithm.size))) < 1e-3 * mean:
         return float(logarithm[0]), float(mean), flux
-    finer = min(fallback_step, float(np.median(step)))
-    nodes = np.arange(logarithm[0], logarithm[-1], finer)
-    return float(logarithm[0]), finer, CubicSpline(logarithm, flux)(nodes)
+    reach = slice(*np.searchsorted(wavelength_um, needed))
+    kept = slice(max(0, reach.start - 8), reach.stop + 8)
+    if logarithm[kept].size < 4:  # nothing in reach: the nearer end value
+        kept = slice(0, 4) if reach.stop == 0 else slice(-4, None)
+    logarithm, flux = logarithm[kept], flux[kept]
+    finer = min(fallback_step, float(np.median(np.diff(logarithm))))
+    nodes, finer = np.linspace(
+        logarithm[0], logarithm[-1], int(np.ceil((logarithm[-1] - logarithm[0]) / finer)) + 1, retstep=True
+    )
+    return float(logarithm[0]), float(finer), CubicSpline(logarithm, flux)(nodes)
 
 
 def shifted_columns(
@@ -89,9 +99,11 @@ def shifted_columns(
         raise InputError(
             "the factor must lie on the operator's fine grid", f"{factor.shape} for {grid.shape}"
         )
-    origin, step, flux = _log_template(wavelength, flux, float(np.min(np.diff(np.log(grid)))))
+    factors = np.atleast_1d(doppler_factor(velocities_km_s))
+    needed = (grid[0] / factors.max(), grid[-1] / factors.min())
+    origin, step, flux = _log_template(wavelength, flux, float(np.min(np.diff(np.log(grid)))), needed)
     position = (np.log(grid) - origin) / step
-    shifts = np.log(np.atleast_1d(doppler_factor(velocities_km_s))) / step
+    shifts = np.log(factors) / step
     out = np.empty((shifts.size, operator.starts.size))
 
     def task(block: slice) -> None:
