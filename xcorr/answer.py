@@ -8,9 +8,10 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from xcorr.engine import Sums
+from xcorr.engine import Sums, conditional_snr
 from xcorr.errors import CoverageError, Note
 from xcorr.results import MoleculeResult, NullSummary
+from xcorr.search import PositionSums
 from xcorr.significance import (
     MIN_NULL_POSITIONS,
     Calibration,
@@ -93,11 +94,13 @@ class Curves:
     conditional_laws: tuple[Calibration, ...]
 
 
-def fitted_signal(evidence: Evidence, index: int) -> NDArray[np.float64]:
-    """Amplitudes of the joint fit at one velocity of the grid, (n_molecule,)."""
-    amplitude, error = evidence.target.joint.joint()
-    values = amplitude[0, :, index]
-    return np.where(np.isfinite(error[0, :, index]), values, 0.0)
+def fitted_signal(target: Sums, index: int) -> NDArray[np.float64]:
+    """Amplitudes of the joint fit at one velocity of the grid, (n_molecule,); 0 outside the first set of rivals."""
+    members = list(target.rivals[0])
+    amplitude, error = target.joint.subset(target.rivals[0]).joint()
+    out = np.zeros(target.num.shape[1])
+    out[members] = np.where(np.isfinite(error[0, :, index]), amplitude[0, :, index], 0.0)
+    return out
 
 
 def remove_signal(evidence: Evidence, index: int) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
@@ -107,14 +110,12 @@ def remove_signal(evidence: Evidence, index: int) -> tuple[NDArray[np.float64], 
     -------
     solo, conditional : arrays (n_molecule, n_velocity)
     """
-    amplitude = fitted_signal(evidence, index)
-    taken = np.einsum("mvn,n->mv", evidence.gram[:, :, :, index], amplitude)
+    target = evidence.target
+    taken = np.einsum("mvn,n->mv", evidence.gram[:, :, :, index], fitted_signal(target, index))
     with np.errstate(invalid="ignore", divide="ignore"):
-        solo = (evidence.target.num[0] - taken) / np.sqrt(evidence.target.info[0])
-    joint = evidence.target.joint
-    left = type(joint)(joint.num - taken[None], joint.info)
-    values, errors = left.joint()
-    return solo, np.where(np.isfinite(errors), values / errors, np.nan)[0]
+        solo = (target.num[0] - taken) / np.sqrt(target.info[0])
+    left = PositionSums(target.joint.num - taken[None], target.joint.info)
+    return solo, conditional_snr(left, target.rivals)[0]
 
 
 def _far(evidence: Evidence, index: int) -> NDArray[np.bool_]:

@@ -52,14 +52,18 @@ class Sums:
     num, info : float64 arrays (n_position, n_molecule, n_velocity)
         Solo.
     joint : PositionSums
+    rivals : tuple of tuple of int
+        Templates that are fitted together. A spectrum of all molecules is no rival of its own parts and stands
+        alone; the first set explains the companion's light.
     """
 
     num: NDArray[np.float64]
     info: NDArray[np.float64]
     joint: PositionSums
+    rivals: tuple[tuple[int, ...], ...]
 
     def __add__(self, other: Sums) -> Sums:
-        return Sums(self.num + other.num, self.info + other.info, self.joint + other.joint)
+        return Sums(self.num + other.num, self.info + other.info, self.joint + other.joint, self.rivals)
 
     def snr(self) -> NDArray[np.float64]:
         """Raw solo S/N, NaN without information."""
@@ -73,8 +77,16 @@ class Sums:
 
     def conditional(self) -> NDArray[np.float64]:
         """Raw conditional S/N: amplitude over error of the joint fit."""
-        amplitude, error = self.joint.joint()
-        return np.where(np.isfinite(error), amplitude / error, np.nan)
+        return conditional_snr(self.joint, self.rivals)
+
+
+def conditional_snr(sums: PositionSums, rivals: tuple[tuple[int, ...], ...]) -> NDArray[np.float64]:
+    """Amplitude over error of the joint fit of each set of rivals, NaN without information."""
+    out = np.full(sums.num.shape, np.nan)
+    for members in rivals:
+        amplitude, error = sums.subset(members).joint()
+        out[:, members] = np.where(np.isfinite(error), amplitude / error, np.nan)
+    return out
 
 
 class ExposureEngine:
@@ -89,6 +101,9 @@ class ExposureEngine:
     def __init__(self, exposure: PreparedExposure, columns: TemplateColumns) -> None:
         self.exposure = exposure
         self.columns = columns
+        whole = tuple(m for m, kind in enumerate(columns.kinds) if kind == "full")
+        parts = tuple(m for m in range(len(columns.kinds)) if m not in whole)
+        self.rivals = tuple(members for members in (parts, *((m,) for m in whole)) if members)
         used = exposure.mean_weights > 0
         patterns = (columns.covered & used).astype(np.uint8)
         groups: dict[bytes, list[int]] = {}
@@ -119,13 +134,13 @@ class ExposureEngine:
         stamps = self.stamps(positions_xy)
         joint = _blocks(self.joint, stamps)
         if len(self.solo) == 1:
-            return Sums(joint.num, joint.diagonal, joint)
+            return Sums(joint.num, joint.diagonal, joint, self.rivals)
         num, info = np.empty_like(joint.num), np.empty_like(joint.num)
         for channel in self.solo:
             part = _blocks(channel, stamps)
             num[:, channel.members] = part.num
             info[:, channel.members] = part.diagonal
-        return Sums(num, info, joint)
+        return Sums(num, info, joint, self.rivals)
 
     def solo_sums(self, positions_xy: NDArray, keep: Callable[[slice, NDArray, NDArray], None]) -> None:
         """Solo sums of many positions (a map), handed over block by block.

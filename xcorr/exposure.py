@@ -581,11 +581,14 @@ class TemplateColumns:
     continuum : float64 array (n_continuum, n_wave)
     covered : bool array (n_molecule, n_wave)
         Channels that each template defines at every searched velocity.
+    kinds : tuple of str
+        `Template.kind` of each.
     """
 
     columns: NDArray[np.float64]
     continuum: NDArray[np.float64]
     covered: NDArray[np.bool_]
+    kinds: tuple[str, ...]
 
     def project(self, exposure: PreparedExposure, molecules: Sequence[int]) -> ProjectedTemplates:
         """Project some of the molecules with the exposure's mean weights."""
@@ -630,7 +633,7 @@ def template_columns(
     smooth = spline_basis(exposure.wavelength_um, exposure.order, exposure.companion_knots).dense().T \
         if exposure.companion_knots else np.zeros((0, n_wave))  # fmt: skip
     continuum = smooth * exposure.transmission * exposure.throughput
-    return TemplateColumns(columns, continuum, covered)
+    return TemplateColumns(columns, continuum, covered, tuple(template.kind for template in templates))
 
 
 def _operator_for(exposure: PreparedExposure, template: Template) -> LsfOperator:

@@ -373,6 +373,16 @@ class Stamps:
         inside = np.where(self.spaxels[:, :, None] >= 0, self.profiles, 0.0)
         return inside.sum(axis=1, dtype=np.float64).mean(axis=1)
 
+    def whole(self, psf: Psf) -> float:
+        """Flux fraction of the same stamp if every spaxel were usable (first position)."""
+        return float(np.clip(_on_grid(psf, _stamp_radius(psf)).sum(axis=(1, 2)).mean(), 1e-6, None))
+
+    def captured_squares(self, psf: Psf) -> float:
+        """Sum of squared profile on usable spaxels over that of the whole PSF, first position: S/N^2 kept."""
+        inside = np.where(self.spaxels[0, :, None] >= 0, self.profiles[0].astype(np.float64), 0.0)
+        whole = (_on_grid(psf, 4.0 * psf.fwhm_pixels) ** 2).sum(axis=(1, 2))
+        return float(np.clip(((inside**2).sum(axis=0) / whole).mean(), 0.0, 1.0))
+
 
 def make_stamps(
     psf: Psf | None,
@@ -400,7 +410,7 @@ def make_stamps(
         node, fraction = _between(nodes, wavelength_um)
         ones = np.ones((len(positions_xy), 1, 2), np.float32)
         return Stamps(np.zeros((len(positions_xy), 1), np.int64), ones, node, fraction)
-    radius = STAMP_RADIUS_FWHM * psf.fwhm_pixels + 0.5
+    radius = _stamp_radius(psf)
     reach = int(np.ceil(radius))
     dy, dx = (a.ravel() for a in np.mgrid[-reach : reach + 1, -reach : reach + 1])
     anchor = np.round(positions_xy).astype(np.int64)
@@ -413,6 +423,17 @@ def make_stamps(
     profiles = np.moveaxis(psf.profile(off_x[:, keep], off_y[:, keep]), 0, -1)
     node, fraction = _between(psf.wavelength_um, wavelength_um)
     return Stamps(np.ascontiguousarray(spaxels), np.ascontiguousarray(profiles, np.float32), node, fraction)
+
+
+def _stamp_radius(psf: Psf) -> float:
+    return STAMP_RADIUS_FWHM * psf.fwhm_pixels + 0.5
+
+
+def _on_grid(psf: Psf, radius: float) -> NDArray[np.float64]:
+    """Profiles on whole-pixel offsets out to a radius, zero beyond, (n_node, n, n)."""
+    reach = int(np.ceil(radius))
+    dy, dx = np.mgrid[-reach : reach + 1, -reach : reach + 1].astype(float)
+    return np.where(np.hypot(dx, dy) <= radius, psf.profile(dx, dy), 0.0)
 
 
 def _between(nodes: NDArray, wavelength_um: NDArray) -> tuple[NDArray[np.int64], NDArray[np.float32]]:

@@ -12,7 +12,6 @@ exposures and spaxels simply add (DESIGN of the program, docs/method.md).
 
 from __future__ import annotations
 
-from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -20,7 +19,7 @@ from numpy.typing import NDArray
 from scipy.interpolate import CubicSpline
 
 from xcorr.kernels.projection import sum_of_products, whiten_overlaps
-from xcorr.kernels.summation import eliminate_continuum, psf_sums
+from xcorr.kernels.summation import eliminate_continuum, psf_sums, weighted_gather
 from xcorr.psf import Stamps
 from xcorr.starlight import Nuisance, StarlightFit
 
@@ -74,7 +73,7 @@ def project_templates(
     The templates are made orthogonal to the continuum columns as well. That changes nothing after
     those are eliminated, and keeps the float32 cross terms small.
     """
-    n_molecule, n_velocity, n_wave = columns.shape
+    n_wave = columns.shape[-1]
     root = np.sqrt(weights)
     dense = nuisance.dense() * root[:, None]
     norms = np.linalg.norm(dense, axis=0)
@@ -253,6 +252,12 @@ class PositionSums:
         left, right = np.triu_indices(self.n_molecule)
         return self.info[:, left == right]
 
+    def subset(self, members: tuple[int, ...]) -> PositionSums:
+        """The sums of some of the templates."""
+        left, right = np.triu_indices(self.n_molecule)
+        inside = np.isin(left, members) & np.isin(right, members)
+        return PositionSums(self.num[:, list(members)], self.info[:, inside])
+
     def matrix(self) -> NDArray[np.float64]:
         """Full information matrices (n_position, n_velocity, n_molecule, n_molecule)."""
         left, right = np.triu_indices(self.n_molecule)
@@ -345,23 +350,15 @@ def position_sums(
 def _subtract_corrections(
     info: NDArray, cross: NDArray, continuum: NDArray, stamps: Stamps, taken: Corrections
 ) -> None:
-    """PSF-sum of the spaxel corrections; they are small, so the profile's mean square over wavelength will do."""
-    squares = np.where(stamps.spaxels[:, :, None] >= 0, stamps.profiles, 0.0) ** 2
-    share = squares.mean(axis=2)
-    n_position, n_stamp = stamps.spaxels.shape
-    for s in range(n_stamp):
-        rows = np.maximum(stamps.spaxels[:, s], 0)
-        weight = share[:, s, None, None]
-        info -= (weight * taken.molecules[rows]) @ taken.interpolation
-        if cross.shape[2]:
-            spread = (weight * taken.cross[rows]) @ taken.interpolation
-            cross -= spread.reshape(cross.shape)
-            continuum -= weight * taken.continuum[rows]
+    """PSF-sum of the spaxel corrections: small, so the mean square of the profile will do."""
+    share = (stamps.profiles.astype(np.float64) ** 2).mean(axis=2)
 
+    def over_stamps(table: NDArray[np.float32]) -> NDArray[np.float64]:
+        out = np.empty((len(share), table[0].size))
+        weighted_gather(stamps.spaxels, share, table.reshape(len(table), -1), out)
+        return out.reshape(len(share), *table.shape[1:])
 
-def add_sums(sums: Sequence[PositionSums]) -> PositionSums:
-    """Sum over exposures."""
-    total = sums[0]
-    for more in sums[1:]:
-        total = total + more
-    return total
+    info -= over_stamps(taken.molecules) @ taken.interpolation
+    if cross.shape[2]:
+        cross -= (over_stamps(taken.cross) @ taken.interpolation).reshape(cross.shape)
+        continuum -= over_stamps(taken.continuum)

@@ -100,3 +100,25 @@ def eliminate_continuum(
             for i in range(n_continuum):
                 for v in range(n_velocity):
                     info[q, pair, v] -= whitened[left[pair], i, v] * whitened[right[pair], i, v]
+
+
+@jit(parallel=True)
+def weighted_gather(
+    spaxels,  # (n_position, n_stamp) int, -1 for none
+    share,  # (n_position, n_stamp) float64
+    table,  # (n_spaxel, n_value) float32
+    out,  # (n_position, n_value) float64 out: sum over the stamp of share * table
+):
+    """Sum of per-spaxel values over the stamp of every position."""
+    n_position, n_stamp = spaxels.shape
+    for q in prange(n_position):
+        total = out[q]
+        total[:] = 0.0
+        for s in range(n_stamp):
+            p = spaxels[q, s]
+            if p < 0:
+                continue
+            weight = share[q, s]
+            row = table[p]
+            for i in range(row.size):
+                total[i] += weight * row[i]
