@@ -75,7 +75,7 @@ class SceneFactory:
         cubes = []
         for i, (exposure, seed) in enumerate(zip(exposures, seeds, strict=True)):
             cubes.append(self._observe(settings, exposure, i, np.random.default_rng(seed.spawn(1)[0])))
-        truth = truth_of(settings, exposures, contrast, self._render.star_is_given)
+        truth = truth_of(settings, exposures, contrast, self._render)
         return Scene(settings, tuple(cubes), tuple(exposures), truth)
 
     def _noiseless(self, s: SceneSettings, i: int) -> Exposure:
@@ -142,7 +142,7 @@ def simulate_scene(
 
 
 def _solve_contrast(unit: list[Exposure], s: SceneSettings) -> float:
-    """Contrast as asked, or the one that gives the asked ideal S/N (white noise: to 1e-4).
+    """Contrast as asked, or the one that gives the asked ideal S/N (white noise: to 5e-4).
 
     The companion's own photons add to the variance, so that S/N grows like contrast**0.5 to contrast**1. The
     loop is run on the spaxels that matter and on white noise; correlated noise then changes the target once,
@@ -183,7 +183,8 @@ def _solve_monotonic(snr: Callable[[float], float], wanted: float, start: float)
         before, x = off, x + step
         off = np.log(snr(np.exp(x)) / wanted)
         power = float(np.clip((off - before) / step, 0.4, 1.1))
-    return float(np.exp(x))
+    # Eight digits: the last bits depend on the linear-algebra library.
+    return float(f"{np.exp(x):.8g}")
 
 
 def _scaled(unit: SignalModel, contrast: float, gain: float) -> SignalModel:

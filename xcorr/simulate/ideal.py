@@ -26,6 +26,7 @@ NEGLECTED = 1.0e-4
 # Of s'C^-1 s; the information is some per cent of it.
 PRECISION = 1.0e-7
 MAX_STEPS = 200
+ROUNDING = 1.0e-12
 
 
 @dataclass(frozen=True)
@@ -138,10 +139,12 @@ class WhiteNormal:
         self._solved = np.matmul(self._inverse, self._cross)  # (p, k, j)
         own = shared.T @ (np.einsum("pn,pn->n", continuum, weighted)[:, None] * shared)
         rest = own - np.tensordot(self._cross, self._solved, axes=((0, 1), (0, 1)))
-        # A shared column that starlight explains in every spaxel has nothing left: it is taken out.
+        # Starlight explains most of a shared column (1e-3 to 1e-10 of it is left in real scenes); a
+        # direction that it explains to rounding is taken out.
         scale = 1.0 / np.sqrt(np.diag(own))
-        self._rest_inverse = np.linalg.pinv(rest * np.outer(scale, scale), rcond=1e-12, hermitian=True)
-        self._rest_inverse *= np.outer(scale, scale)
+        left, direction = np.linalg.eigh(rest * np.outer(scale, scale))
+        direction = direction[:, left > ROUNDING] * scale[:, None]
+        self._rest_inverse = (direction / left[left > ROUNDING]) @ direction.T
 
     def solve(self, columns: Array, shared: Array) -> tuple[Array, Array]:
         """Solution for right-hand sides (p, k) and (j,)."""
@@ -161,7 +164,7 @@ def _normal_matrices(starlight: Array, weight: Array) -> Array:
         normal[:, row + lag, row] = products
     diagonal = np.arange(knots)
     empty = normal[:, diagonal, diagonal] <= 0.0
-    ridge = 1.0e-12 * normal[:, diagonal, diagonal]
+    ridge = 1.0e-13 * normal[:, diagonal, diagonal]
     normal[:, diagonal, diagonal] += np.where(empty, 1.0, ridge)
     return normal
 

@@ -5,7 +5,8 @@ functions; so a plane is normalised to one over the infinite sky by construction
 lie anywhere, outside the field too.
 
 * core: Gaussian, FWHM proportional to wavelength;
-* halo: Moffat profile as its Gamma mixture of Gaussians, FWHM proportional to wavelength**-0.2
+* halo: Moffat profile as its Gamma mixture of Gaussians (twelve of them: 1 % out to 1.5 FWHM, fainter
+  beyond), FWHM proportional to wavelength**-0.2
   (the law of long-exposure seeing, common practice);
 * speckles: copies of the core whose distance from the source is proportional to wavelength.
 
@@ -23,7 +24,7 @@ from scipy.special import ndtr, roots_genlaguerre
 from xcorr.units import FWHM_PER_SIGMA
 
 Array = NDArray[np.float64]
-HALO_NODES = 8
+HALO_NODES = 12
 
 
 @dataclass(frozen=True)
@@ -41,7 +42,7 @@ class PointSpread:
     speckle_xy : array (n_speckle, 2)
         Offsets (x, y) from the source in pixels at `wavelength_um`.
     speckle_flux : array (n_speckle,)
-        Flux of each speckle as a fraction of the whole.
+        Flux of each speckle as a fraction of the whole at `wavelength_um`.
     """
 
     fwhm_pixels: float
@@ -63,8 +64,9 @@ class PointSpread:
         halo_flux = halo * node_weights / node_weights.sum()
         speckle_xy = np.zeros((0, 2)) if self.speckle_xy is None else self.speckle_xy
         speckle_flux = np.zeros(0) if self.speckle_flux is None else self.speckle_flux
-        one = np.ones_like(ratio)
-        flux = np.hstack([1.0 - halo - speckle_flux.sum(), halo_flux, one * speckle_flux])
+        coherent = 1.0 - halo
+        speckles = coherent * speckle_flux / (1.0 - self.halo_fraction)
+        flux = np.hstack([coherent - speckles.sum(axis=1, keepdims=True), halo_flux, speckles])
         sigma = np.hstack([core_sigma, halo_sigma, core_sigma * np.ones(speckle_flux.size)])
         offset = np.zeros((wavelength_um.size, flux.shape[1], 2))
         offset[:, 1 + HALO_NODES :] = ratio[:, :, None] * speckle_xy

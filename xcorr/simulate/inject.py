@@ -26,7 +26,7 @@ def inject(
     cube: Cube,
     template: Template,
     *,
-    position_xy: Any = (0.0, 0.0),
+    position_xy: Any = None,
     velocity_km_s: Any = 0.0,
     amplitude: float | None = None,
     snr: float | None = None,
@@ -58,7 +58,7 @@ def inject(
     template : Template
         F. Its `reference_flux` has mean 1 over the channels at v = 0, before T.
     position_xy : (x, y) or array (n_wave, 2)
-        Zero-based position; per channel where refraction moves it. Not used for a spectrum.
+        Zero-based position; per channel where refraction moves it. Needed for a cube, unused for a spectrum.
     velocity_km_s : float or Quantity
         Companion in the barycentric frame, relativistic.
     amplitude : float, optional
@@ -106,10 +106,11 @@ def inject(
     CoverageError
         If the template covers fewer than half of the channels, or the position lies outside the field.
     """
-    _check_arguments(cube, amplitude, snr, psf, psf_fwhm_pixels)
+    position_xy = _check_arguments(cube, position_xy, amplitude, snr, psf, psf_fwhm_pixels)
     velocity = float(to_plain(velocity_km_s, "km/s"))
     image = _image(cube, position_xy, psf, psf_fwhm_pixels)
-    barycentric = _barycentric(cube, barycentric_velocity_km_s)
+    unused = cube.frame != "observatory" and transmission is None
+    barycentric = 0.0 if unused else _barycentric(cube, barycentric_velocity_km_s)
     resolving = _resolving_power(cube, resolving_power, position_xy)
     source = _transmission(transmission, water, airmass)
     spectrum, continuum, covered = _spectra(cube, template, velocity, barycentric, resolving, source)
@@ -139,13 +140,17 @@ def inject(
     return _added(cube, added, noted, photon_noise, seed)
 
 
-def _check_arguments(cube: Cube, amplitude, snr, psf, fwhm) -> None:
+def _check_arguments(cube: Cube, position_xy, amplitude, snr, psf, fwhm) -> Array:
+    """Raise where arguments are missing or contradict each other; the position as an array."""
     if (amplitude is None) == (snr is None):
         raise InputError("inject needs either amplitude or snr", f"{amplitude} and {snr}", "give one of them")
     if snr is not None and cube.variance is None:
         raise InputError("an S/N needs the cube's errors", "no variance", "give the amplitude")
     if not cube.is_spectrum and (psf is None) == (fwhm is None):
         raise InputError("inject needs either psf or psf_fwhm_pixels", "both or neither", "give one of them")
+    if position_xy is None and not cube.is_spectrum:
+        raise InputError("inject needs a position in the cube", "None", "give position_xy")
+    return np.asarray((0.0, 0.0) if position_xy is None else position_xy, np.float64)
 
 
 def _image(cube: Cube, position_xy, psf, fwhm) -> Array:

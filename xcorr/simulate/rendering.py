@@ -46,6 +46,7 @@ class Renderer:
     ) -> None:
         self.settings = settings
         self._companion = _as_spectrum(companion)
+        self.companion_description = str(getattr(companion, "description", ""))
         self._given_transmission = transmission
         self._given_star = star_spectrum
         self._companion_cache: dict[tuple[float, float], Array] = {}

@@ -31,11 +31,11 @@ def a_star(wavelength_um: Array, temperature_k: float) -> Array:
     return planck_shape(wavelength_um, temperature_k) * (1.0 - BRACKETT_GAMMA_DEPTH / (1.0 + x * x))
 
 
-# Columns (molecules per cm2) of the absorbing layer of an M star; they give CO heads about 30 % deep at
-# R = 2000, as in giants, and shallow water.
-M_STAR_COLUMNS = {"CO": 2.0e20, "H2O": 1.5e19}
+# Columns (molecules per cm2) of the absorbing layer of an M star; they give a CO head about 20 % deep at
+# R = 4000 and water of about one per cent.
+M_STAR_COLUMNS = {"CO": 5.0e21, "H2O": 3.0e20}
 M_STAR_LAYER_K = 2800.0
-M_STAR_LAYER_BAR = 0.1
+M_STAR_LAYER_BAR = 0.5
 
 
 def m_star(wavelength_um: Array, temperature_k: float) -> Array:

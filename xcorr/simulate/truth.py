@@ -7,6 +7,7 @@ from typing import Any
 
 import numpy as np
 
+from xcorr.simulate.rendering import Renderer
 from xcorr.simulate.scene import Exposure, information_limit
 from xcorr.simulate.settings import SceneSettings
 
@@ -17,7 +18,7 @@ PIXEL_ARCSEC = 0.05
 
 
 def truth_of(
-    s: SceneSettings, exposures: list[Exposure], contrast: float, star_is_given: bool
+    s: SceneSettings, exposures: list[Exposure], contrast: float, render: Renderer
 ) -> dict[str, Any]:
     per_exposure = [
         information_limit([e.signal_model(s.correlation)]) if contrast else 0.0 for e in exposures
@@ -30,9 +31,10 @@ def truth_of(
         "amplitude": contrast,
         "ideal_snr": float(np.sqrt(np.sum(np.square(per_exposure)))),
         "ideal_columns": {"knots": 40, "companion_knots": 6, "reference": "true star spectrum"},
+        "companion": render.companion_description,
         "velocity_km_s": s.companion_velocity_km_s,
         "star_velocity_km_s": s.star_velocity_km_s,
-        "star_temperature_k": None if star_is_given else s.temperature_k,
+        "star_temperature_k": None if render.star_is_given else s.temperature_k,
         "exposures": [
             {
                 "ideal_snr": snr,
