@@ -140,8 +140,11 @@ def test_contrast_solved_for_with_correlated_noise_and_two_exposures():
     assert np.hypot(*parts) == pytest.approx(scene.truth["ideal_snr"], rel=1e-12)
 
 
-def test_neglected_spaxels_hold_what_is_claimed(monkeypatch):
+@pytest.mark.parametrize(("correlation", "low"), [(Correlation(), 1e-4), (CORRELATED, 5e-4)])
+def test_neglected_spaxels_hold_what_is_claimed(monkeypatch, correlation, low):
     """All spaxels against the kept ones in a scene with halo and speckles."""
-    scene = SceneFactory(scene_settings(), lines_spectrum()).draw()
-    monkeypatch.setattr("xcorr.simulate.ideal.NEGLECTED", 0.0)
-    assert ideal_snr(scene) == pytest.approx(scene.truth["ideal_snr"], rel=1e-4)
+    scene = SceneFactory(scene_settings(), lines_spectrum()).draw(correlation=correlation)
+    for name in ("NEGLECTED", "NEGLECTED_CORRELATED"):
+        monkeypatch.setattr(f"xcorr.simulate.ideal.{name}", 0.0)
+    assert ideal_snr(scene) == pytest.approx(scene.truth["ideal_snr"], rel=low)
+    assert ideal_snr(scene) > scene.truth["ideal_snr"]

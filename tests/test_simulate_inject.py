@@ -81,7 +81,7 @@ def test_equals_the_scene_simulator():
     settings = SceneSettings(
         wavelength_range_um=(2.25, 2.38), n_wave=400, nx=15, ny=13, transmission="synthetic", contrast=1e-2,
         halo_fraction=0.0, n_speckles=0, drift_xy_pixels=(0.0, 0.0), companion_velocity_km_s=-33.0,
-        barycentric_velocity_km_s=(11.0,), background_electrons=0.0, read_noise_electrons=0.0,
+        barycentric_velocity_km_s=(11.0,), background_electrons=1.0, read_noise_electrons=0.0,
     )  # fmt: skip
     factory = SceneFactory(settings, t)
     wanted = factory.draw().exposures[0]

@@ -174,6 +174,7 @@ def test_demo_scene_is_what_the_quick_start_says():
         {"star": "G"},
         {"n_exposures": 3, "rotation_deg": (1.0, 2.0)},
         {"resolving_power": 0.0},
+        {"background_electrons": 0.0, "read_noise_electrons": 0.0},
         {"wavelength_range_um": (2.4, 2.3)},
     ],
 )

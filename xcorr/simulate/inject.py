@@ -115,21 +115,22 @@ def inject(
     source = _transmission(transmission, water, airmass)
     spectrum, continuum, covered = _spectra(cube, template, velocity, barycentric, resolving, source)
     scale = np.broadcast_to(np.asarray(star_flux, np.float64), spectrum.shape) * 10.0**cube.scale_exponent
-    unit = (scale * spectrum)[:, None, None] * image
+    unit = (scale * spectrum).astype(np.float32)[:, None, None] * image
     if amplitude is None:
         model = SignalModel(
             signal=unit,
             variance=cube.variance,
             good=~cube.mask,
             reference=np.ones(spectrum.size) if reference is None else np.asarray(reference, np.float64),
-            continuum=(scale * continuum)[:, None, None] * image,
+            continuum=(scale * continuum).astype(np.float32)[:, None, None] * image,
             correlation=Correlation(),
         )
         limit = np.sqrt(max(information(model, knots, companion_knots), 0.0))
         if not limit > 0.0:
             raise CoverageError("the companion leaves no signal in the usable samples", "S/N 0", "move it")
         amplitude = float(snr) / limit
-    added = np.where(cube.mask, 0.0, amplitude * unit)
+    added = unit * np.float32(amplitude)
+    added[cube.mask] = 0.0
     noted = Note(
         "injected-companion",
         f"a companion was injected: template {template.name!r}, amplitude {amplitude:.6g}, "
@@ -153,22 +154,22 @@ def _check_arguments(cube: Cube, position_xy, amplitude, snr, psf, fwhm) -> Arra
     return np.asarray((0.0, 0.0) if position_xy is None else position_xy, np.float64)
 
 
-def _image(cube: Cube, position_xy, psf, fwhm) -> Array:
+def _image(cube: Cube, position_xy, psf, fwhm) -> NDArray[np.float32]:
     """Fraction of the flux in each spaxel (n_wave, ny, nx)."""
     n_wave, ny, nx = cube.shape
     if cube.is_spectrum:
-        return np.ones((n_wave, 1, 1))
+        return np.ones((n_wave, 1, 1), np.float32)
     position = np.broadcast_to(np.asarray(position_xy, np.float64), (n_wave, 2))
     x, y = position.mean(axis=0)
     if not (-0.5 <= x <= nx - 0.5 and -0.5 <= y <= ny - 0.5):
         raise CoverageError("the injected companion lies outside the field", f"({x:.2f}, {y:.2f})", "move it")
     if psf is None:
         spread = PointSpread(float(fwhm), float(np.median(cube.wavelength_um)))
-        return render(spread, cube.wavelength_um, position, nx, ny).astype(np.float64)
+        return render(spread, cube.wavelength_um, position, nx, ny)
     planes = np.asarray(psf, np.float64)
     planes = np.broadcast_to(planes, (n_wave, *planes.shape[-2:]))
     rows, columns = np.mgrid[0:ny, 0:nx]
-    moved = np.empty((n_wave, ny, nx))
+    moved = np.empty((n_wave, ny, nx), np.float32)
     for k in range(n_wave):
         at = (
             rows - position[k, 1] + (planes.shape[1] - 1) / 2.0,
@@ -264,17 +265,17 @@ def _covered(cube: Cube, template: Template, factor: float, resolving) -> NDArra
     return (low >= x[0]) & (high <= x[-1]) & (holes[last] == holes[first])
 
 
-def _added(cube: Cube, added: Array, note: Note, photon_noise: bool | None, seed: int) -> Cube:
+def _added(cube: Cube, added: NDArray[np.float32], note: Note, photon_noise: bool | None, seed: int) -> Cube:
     """The cube with the companion, its photon noise and a note."""
     gain = cube.gain_e_per_unit
     wanted = gain is not None if photon_noise is None else photon_noise
     if wanted and gain is None:
         raise InputError("photon noise needs the cube's gain", "gain unknown", "set gain_e_per_unit")
-    data = cube.data.astype(np.float64) + added
+    data = cube.data + added
     variance = cube.variance
     if wanted:
-        extra = np.maximum(added, 0.0) / gain
-        data += np.sqrt(extra) * np.random.default_rng(seed).standard_normal(added.shape)
+        extra = np.maximum(added, 0.0) / np.float32(gain)
+        data += np.sqrt(extra) * np.random.default_rng(seed).standard_normal(added.shape, np.float32)
         if variance is not None:
-            variance = (variance + extra).astype(np.float32)
-    return cube.with_changes(data=data.astype(np.float32), variance=variance, notes=(*cube.notes, note))
+            variance = variance + extra
+    return cube.with_changes(data=data, variance=variance, notes=(*cube.notes, note))

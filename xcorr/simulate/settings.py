@@ -154,6 +154,8 @@ class SceneSettings:
             _require(count in (1, self.n_exposures), f"{name} needs one value or one per exposure", count)
         both = (self.contrast is None) == (self.ideal_snr is None)
         _require(not both, "give either contrast or ideal_snr", (self.contrast, self.ideal_snr))
+        floor = self.background_electrons + self.read_noise_electrons
+        _require(floor > 0.0, "background and read noise must not both be zero", floor)
         _require(0.0 <= self.halo_fraction < 1.0, "halo_fraction must be in [0, 1)", self.halo_fraction)
         _require(self.halo_beta > 1.0, "halo_beta must exceed 1", self.halo_beta)
         rhos = (self.correlation.rho_channel, self.correlation.rho_y, self.correlation.rho_x)
