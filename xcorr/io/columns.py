@@ -217,9 +217,9 @@ def _to_um(coordinate: Floats, unit: str) -> tuple[Floats, bool]:
     """(micrometre, whether a descending order is natural)."""
     parsed = spectral_unit(unit)
     with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
-        si = coordinate * parsed.to_si
         if parsed.kind == "length":
-            return si * 1e6, False
+            return coordinate * (parsed.to_si * 1e6), False  # micrometres stay what they are, bit for bit
+        si = coordinate * parsed.to_si
         if parsed.kind == "frequency":
             return LIGHT_M_S / si * 1e6, True
         if parsed.kind == "wavenumber":

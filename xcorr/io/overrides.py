@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import difflib
+import math
 import os
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, fields
@@ -89,7 +90,8 @@ class Overrides:
                 _integer(name, value, 0)
         for name in ("gain_e_per_unit", "barycentric_velocity_km_s"):
             _number(name, getattr(self, name))
-        if isinstance(self.resolving_power, int | float) and not self.resolving_power > 0:
+        r = self.resolving_power
+        if isinstance(r, int | float) and not (r > 0 and math.isfinite(r)):
             raise InputError(
                 "resolving power must be positive", f"{self.resolving_power}", "give R = lambda/FWHM"
             )

@@ -84,6 +84,10 @@ def choose_planes(file: FitsFile, overrides: Overrides) -> Planes:
     if error is None:
         twins = [h.label for h in file.hdus if _is_image(h) and h.naxis == science.naxis and not role_of(h)]
         twins = [label for label in twins if label != science.label]
+        misfits = [h.label for h in file.hdus if role_of(h) == "error" and _is_image(h)]
+        if misfits:
+            message = f"error extension {', '.join(misfits)} is of another object or shape: not used"
+            notes.append(Note("error-plane-unused", message))
         if twins:
             message = f"extension {', '.join(twins)} has the shape of the cube but no telling name: not used"
             notes.append(Note("unused-plane", message))
@@ -120,7 +124,7 @@ def _science(file: FitsFile, overrides: Overrides) -> Hdu:
 def _prefix(hdu: Hdu) -> str:
     """What tells apart the planes of several objects in one file, e.g. "IFU.7." of "IFU.7.DATA"."""
     word = _word(hdu.name)
-    stem = hdu.name.rsplit(word, 1)
+    stem = hdu.name.rsplit(word, 1) if word else []
     return "".join(stem) + f":{hdu.cards.get('EXTVER', 1)}" if word else f"#{hdu.index}"
 
 

@@ -131,7 +131,7 @@ def _mask_zeros_of_ragged_spaxels(samples: Samples) -> None:
         zeros += np.count_nonzero((data[part] == 0) & ~mask[part], axis=0)
         usable += np.count_nonzero(~mask[part], axis=0)
     fraction = zeros / np.maximum(usable, 1)
-    if np.median(fraction[usable > 0]) >= 0.01:
+    if not usable.any() or np.median(fraction[usable > 0]) >= 0.01:
         return
     for y, x in np.argwhere(fraction > 0.1):
         samples.add_mask((slice(None), y, x), data[:, y, x] == 0, "zero at the rim")
