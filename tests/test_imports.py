@@ -14,10 +14,10 @@ LAYERS = (
     "spectral",
     *("cube", "template", "results"),
     "io",
-    *("lines", "atmosphere", "tellurics", "psf", "starlight", "star", "noise", "search"),
-    *("exposure", "significance"),
+    *("lines", "atmosphere", "tellurics", "psf", "geometry", "starlight", "star", "noise", "search"),
+    *("significance", "exposure", "engine", "answer", "assemble"),
     *("vetting", "injection", "abundance", "simulate"),
-    *("inspection", "report", "_config_errors", "config", "pipeline", "cli"),
+    *("inspection", "report", "_config_errors", "config", "inputs", "pipeline", "cli"),
 )
 COMMAND_LINE = ("cli", "commands", "__main__")
 SCIENCE = LAYERS[LAYERS.index("lines") : LAYERS.index("simulate") + 1]

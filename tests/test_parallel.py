@@ -8,7 +8,8 @@ import pytest
 from threadpoolctl import threadpool_info
 
 from xcorr.errors import InputError
-from xcorr.parallel import WorkerError, limited_threads, map_tasks
+from xcorr.kernels.threads import limited_threads
+from xcorr.parallel import WorkerError, map_tasks
 
 WAYS = [{"jobs": 1}, {"jobs": 2}, {"jobs": 3}, {"jobs": 2, "threads": True}]
 

@@ -10,7 +10,6 @@ import os
 import tempfile
 import warnings
 from collections.abc import Callable, Iterable, Iterator, Sequence
-from contextlib import contextmanager
 from functools import partial
 from pathlib import Path
 from typing import Any, TypeVar
@@ -30,24 +29,6 @@ def single_thread() -> Any:
     from threadpoolctl import threadpool_limits
 
     return threadpool_limits(1)
-
-
-@contextmanager
-def limited_threads(jobs: int) -> Iterator[None]:
-    """One BLAS and OpenMP thread, and `jobs` threads for compiled kernels, while the block runs.
-
-    Kernels share out rows and sum within them, so that their results do not depend on `jobs`; those of BLAS
-    would.
-    """
-    import numba
-
-    before = numba.get_num_threads()
-    with single_thread():
-        numba.set_num_threads(max(1, min(jobs, numba.config.NUMBA_NUM_THREADS)))
-        try:
-            yield
-        finally:
-            numba.set_num_threads(before)
 
 
 def _run_one(
