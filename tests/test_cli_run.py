@@ -17,6 +17,7 @@ from xcorr.config import load_settings
 from xcorr.io.results import read_result
 from xcorr.simulate import SceneFactory, demo_companion, quick_settings
 
+ROOT = Path(__file__).resolve().parent.parent
 ONE_LINE = re.compile(r"(xcorr: (?!error)[^\n]*\n)*xcorr: error: [^;]+; got .+; .+\n")
 FILES = {
     *("summary.json", "summary.ecsv", "summary.tex", "result.h5", "run.toml", "log.txt", "maps"),
@@ -78,6 +79,15 @@ def test_everything_promised_is_written(answer):
         assert file["snr_map"].shape == (2, 16, 16)
         assert file["velocity_km_s"][:].tolist() == np.arange(-600.0, 601.0, 20.0).tolist()
     assert len(Table.read(answer / "summary.ecsv")) == 2
+
+
+def test_every_dataset_is_documented(answer):
+    described = set(re.findall(r"`([\w/]+)`", (ROOT / "docs" / "output.md").read_text()))
+    names = []
+    with h5py.File(answer / "result.h5") as file:
+        file.visititems(lambda name, item: names.append(name) if isinstance(item, h5py.Dataset) else None)
+    assert len(names) > 20
+    assert {re.sub(r"^exposure/\d+/", "", name) for name in names} <= described
 
 
 def test_times_hosts_and_absolute_paths_are_in_the_log_only(scene, answer):
