@@ -35,7 +35,7 @@ def emergent_spectrum(
     log_g: float | None = None,
     mixing_ratios: Mapping[str, float],
     n_layers: int = 60,
-    n_angles: int = 4,
+    n_angles: int = 6,
     structure: Structure | None = None,
     lines: Mapping[str, LineList] | None = None,
     wing_cm: float = 25.0,
@@ -91,7 +91,7 @@ def emergent_spectra(
     structure: Structure,
     mixtures: Mapping[str, Mapping[str, float]],
     *,
-    n_angles: int = 4,
+    n_angles: int = 6,
     lines: Mapping[str, LineList] | None = None,
     wing_cm: float = 25.0,
 ) -> dict[str, NDArray[np.float64]]:
