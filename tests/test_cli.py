@@ -129,7 +129,7 @@ def test_run_file_is_a_folder(here, capsys):
     ("text", "words"),
     [
         (b"[search\n", ["not valid TOML", "line 1"]),
-        (os.urandom(64) + b"\xff", ["run.toml"]),
+        (np.random.default_rng(5).bytes(64) + b"\xff", ["run.toml"]),
         (b"[[exposure]]\nfile = 'a.fits'\n[search]\nmolecule = ['CO']\n", ["did you mean molecules"]),
         (
             b"[[exposure]]\nfile = 'a.fits'\nresolving_power = 0\n[search]\nmolecules = ['CO']\n",
@@ -364,7 +364,11 @@ def test_inspect_notices_wrong_errors(cube_file, capsys):
     assert "smaller than the scatter" in found["errors"]["verdict"]
 
 
-@pytest.mark.parametrize("content", [None, b"", b"SIMPLE", os.urandom(5000)])
+@pytest.mark.parametrize(
+    "content",
+    [None, b"", b"SIMPLE", np.random.default_rng(6).bytes(5000)],
+    ids=["none", "empty", "start", "random"],
+)
 def test_inspect_of_what_is_no_cube(here, capsys, content):
     if content is not None:
         (here / "x.fits").write_bytes(content)
