@@ -81,9 +81,9 @@ class Layout:
             yield tuple(part if i == split else slice(None) for i in range(3)), chunk
 
 
-def read_fits_cube(path: Path, overrides: Overrides) -> Cube:
+def read_fits_cube(file: FitsFile, overrides: Overrides) -> Cube:
     """Read a FITS image with a spectral axis; see `xcorr.io.read_cube`."""
-    file = FitsFile(path)
+    path = file.path
     planes = choose_planes(file, overrides)
     science = planes.science
     primary = file.hdus[0].cards

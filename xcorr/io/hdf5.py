@@ -33,7 +33,7 @@ _ERRORS = {
     "ivar": "inverse_variance",
 }
 _QUALITY = ("mask", "quality", "dq")
-_FAULTS = (OSError, KeyError, TypeError, ValueError, RuntimeError, OverflowError)
+_FAULTS = (OSError, KeyError, RuntimeError)
 _BLOCK = 64
 
 

@@ -51,7 +51,10 @@ def read_cube(path: PathLike, **overrides: Any) -> Cube:
         Unknown or mistyped override.
     """
     file, settings = existing_file(path), overrides_from(overrides)
-    cube = read_hdf5_cube(file, settings) if is_hdf5(file) else read_fits_cube(_need_fits(file), settings)
+    if is_hdf5(file):
+        cube = read_hdf5_cube(file, settings)
+    else:
+        cube = read_fits_cube(FitsFile(_need_fits(file)), settings)
     if cube.is_spectrum:
         raise InputError("the file holds a single spectrum, no cube", file.name, "use read_spectrum")
     return cube
@@ -87,8 +90,8 @@ def read_exposure(path: PathLike, **overrides: Any) -> Cube:
     file, settings = existing_file(path), overrides_from(overrides)
     if is_hdf5(file):
         return read_hdf5_cube(file, settings)
-    if _is_fits(file) and _is_image_exposure(FitsFile(file), settings):
-        return read_fits_cube(file, settings)
+    if _is_fits(file) and _is_image_exposure(scanned := FitsFile(file), settings):
+        return read_fits_cube(scanned, settings)
     return read_columns_spectrum(file, settings)
 
 
