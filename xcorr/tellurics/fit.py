@@ -9,6 +9,7 @@ from numpy.typing import ArrayLike, NDArray
 from scipy.interpolate import PchipInterpolator
 
 from xcorr.errors import InputError, Note
+from xcorr.parallel import single_thread
 from xcorr.spectral import channel_edges, doppler_factor, log_grid
 from xcorr.spectral.continuum import smooth_basis, upper_envelope
 from xcorr.tellurics.model import SCALE_RANGE, Depths, Star, operator_at, optical_depths
@@ -22,8 +23,8 @@ FINE_GRID_R = 300_000.0
 """Sampling of the transmission handed on (the rule for line-by-line work is 200,000 or more)."""
 VELOCITY_NOTE_KM_S = 10.0
 MEDIUM_KM_S = 81.8  # c (n - 1) of air near 2 um, Ciddor 1996
-# Between what noise and telluric-free M giants reach (0.03) and the worst M giant behind dry air (0.7).
-MIN_EXPLAINED = 0.25
+# Between telluric-free M giants (up to 0.11) and M giants behind dry air in the H band (from 0.22); R = 2000.
+MIN_EXPLAINED = 0.17
 MIN_IMPROVEMENT = 60.0
 MIN_CHANNELS = 50
 
@@ -100,7 +101,8 @@ def fit_transmission(
     if refusal is not None:
         return _fallback(at_rest, used, scale, grid, refusal)
     depths = optical_depths(transmission, at_rest)
-    solution = solve(fitted, depths)
+    with single_thread():  # small matrices: two BLAS threads are slower, and give other bits
+        solution = solve(fitted, depths)
     explained = 1.0 - solution.chi2 / solution.chi2_without
     improvement = solution.chi2_without - solution.chi2
     if explained < MIN_EXPLAINED or improvement < MIN_IMPROVEMENT:
@@ -231,7 +233,7 @@ def _result(
         chi2=solution.chi2,
         n_used=int(np.count_nonzero(solution.robust > 0.5)),
         explained=1.0 - solution.chi2 / solution.chi2_without,
-        model_error=solution.model_error,
+        model_error=float(np.median(solution.model_error)),
         usable=True,
         notes=_velocity_notes(velocity, error),
     )
