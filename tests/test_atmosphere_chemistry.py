@@ -9,7 +9,8 @@ from xcorr.atmosphere.chemistry import H2_FRACTION, SOLAR_CARBON, SOLAR_GAS_OXYG
 from xcorr.errors import InputError
 
 ATM_BAR = 1.01325
-# Burrows & Sharp 1999, ApJ 512, 843, eqs. 1-8 with Asplund et al. 2009 abundances: T, CO, CH4, H2O, NH3 per H2, 1 atm
+# Burrows & Sharp 1999, ApJ 512, 843, eqs. 1-8, abundances of Asplund et al. 2009, 1 atm:
+# T, then CO, CH4, H2O per particle and NH3 per H2
 WORKED = [
     (1000, 1.0617e-5, 4.4939e-4, 6.4505e-4, 4.07e-6),
     (1200, 2.6454e-4, 1.9546e-4, 3.9113e-4, 1.34e-6),

@@ -205,18 +205,20 @@ def test_unknown_molecule():
         cross_section("NaCl", np.linspace(4280, 4290, 10), 1000.0, 1.0)
 
 
-# TIPS-2021 (Gamache et al. 2021, JQSRT 271, 107713); CH4 from a copy of unknown release: 0.5 %
+# TIPS-2021 (Gamache et al. 2021, JQSRT 271, 107713). Shipped are sums over levels: the Dunham levels of CO
+# (Huber & Herzberg 1979) differ from TIPS by 8e-6, those of H2O (Barber et al. 2006) by 4e-4. The CH4
+# values are of unknown release: 0.5 %. Required of all: 0.5 %.
 @pytest.mark.parametrize(
     ("molecule", "temperature", "expected", "tolerance"),
     [
-        ("CO", 296, 107.419824, 1e-6),
-        ("CO", 1000, 380.296965, 1e-6),
-        ("CO", 1500, 625.62894, 1e-6),
-        ("CO", 2000, 928.313078, 1e-6),
-        ("H2O", 296, 174.5813, 1e-6),
-        ("H2O", 1000, 1218.06925, 1e-6),
-        ("H2O", 1500, 2712.10111, 1e-6),
-        ("H2O", 2000, 5274.24868, 1e-6),
+        ("CO", 296, 107.419824, 2e-5),
+        ("CO", 1000, 380.296965, 2e-5),
+        ("CO", 1500, 625.62894, 2e-5),
+        ("CO", 2000, 928.313078, 2e-5),
+        ("H2O", 296, 174.5813, 5e-4),
+        ("H2O", 1000, 1218.06925, 5e-4),
+        ("H2O", 1500, 2712.10111, 5e-4),
+        ("H2O", 2000, 5274.24868, 5e-4),
         ("CH4", 296, 590.48, 5e-3),
         ("CH4", 1000, 8065.02611, 5e-3),
     ],

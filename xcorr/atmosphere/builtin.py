@@ -261,6 +261,10 @@ def _notes(
     if name == FULL and inside < 0.99 and ratios.get("CH4", 0.0) >= MOLECULE_FLOOR:
         text = f"methane is left out beyond {low:.2f}-{high:.2f} um ({100 * (1 - inside):.0f} % of the range)"
         notes.append(Note("methane-outside-range", text))
+    coldest = max(float(table.temperature_k[0]) for table in load_cia().values())
+    if t_eff < coldest:
+        text = f"H2-H2 and H2-He absorption below {coldest:.0f} K is that of {coldest:.0f} K, too strong"
+        notes.append(Note("warm-collisions", text))
     limit = load_lines("H2O").complete_to_k
     if name in ("H2O", FULL) and t_eff >= limit:
         notes.append(Note("hot-lines-incomplete", f"H2O: hot lines incomplete from {limit:.0f} K up"))

@@ -71,9 +71,10 @@ def emergent_spectrum(
 
     Notes
     -----
-    Cold methane absorbs only inside its table (1.4-2.5 um), elsewhere not at all. Collisions
-    below 50-60 K and above 4000 K use the nearest table. Layers hotter than the partition sums
-    (3000 K) take the line strengths of the hottest tabulated temperature; they lie far below any photosphere.
+    Cold methane absorbs only inside its table (1.4-2.5 um), elsewhere not at all. Collisions use the nearest
+    table below the coldest one (1000 K; a factor 3 too strong at 300 K and 4100 cm-1) and above the hottest.
+    Layers hotter than the partition sums (3000 K) take the line strengths of the hottest tabulated
+    temperature; they lie far below any photosphere.
     """
     grid = to_plain(wavelength_um, "um")
     if structure is None:

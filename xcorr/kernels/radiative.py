@@ -43,11 +43,10 @@ def emergent_flux(
             for layer in range(bottom - 1, -1, -1):
                 slant = optical_depth[layer, k] / mu[m]
                 above = source[layer, k]
-                if slant < 1e-4:  # series: the closed form loses digits here
-                    absorbed = slant * (1.0 - 0.5 * slant)
+                absorbed = -math.expm1(-slant)
+                if slant < 1e-4:  # series: one minus the quotient would lose digits here
                     mean = 1.0 - 0.5 * slant + slant * slant / 6.0
                 else:
-                    absorbed = -math.expm1(-slant)
                     mean = absorbed / slant
                 intensity += absorbed * (below - intensity) + (above - below) * (1.0 - mean)
                 below = above
