@@ -166,6 +166,12 @@ def test_output_that_exists(small_run, capsys):
     refused(["run", "run.toml", "--out", "d"], capsys, "exists and is not empty", "--overwrite")
 
 
+def test_scene_that_exists(here, capsys):
+    (here / "scene").mkdir()
+    (here / "scene" / "precious").touch()
+    refused(["simulate", "--out", "scene"], capsys, "exists and is not empty", "--overwrite")
+
+
 def test_output_over_inputs(small_run, capsys):
     refused(["run", "run.toml", "--out", ".", "--overwrite"], capsys, "must stay", "choose another --out")
 

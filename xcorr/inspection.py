@@ -12,7 +12,7 @@ from numpy.typing import NDArray
 
 from xcorr.cube import Cube
 from xcorr.errors import InputError, Note
-from xcorr.psf import find_peak, fit_star_image, node_images
+from xcorr.psf import N_NODE, find_peak, fit_star_image, node_images
 from xcorr.units import LIGHT_KM_S
 
 MATCHING_ERRORS = (0.8, 1.25)
@@ -236,7 +236,7 @@ def _brightest(cube: Cube, usable: NDArray[np.bool_]) -> tuple[SourceImage | Non
     """Position and width of the brightest source; nothing for a spectrum."""
     if cube.is_spectrum or not usable.any():
         return None, ()
-    wavelength, images = node_images(cube.data, usable, cube.wavelength_um)
+    wavelength, images = node_images(cube.data, usable, cube.wavelength_um, min(N_NODE, cube.shape[0]))
     finite = np.isfinite(images)
     count = finite.sum(axis=0)
     mean = np.where(count > 0, np.where(finite, images, 0.0).sum(axis=0) / np.maximum(count, 1), np.nan)
