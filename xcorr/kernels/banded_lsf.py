@@ -147,7 +147,7 @@ def rotation_gather(
     epsilon,  # linear limb darkening
     out,  # (n,)
 ):
-    """Convolution with Gray's rotation profile integrated over each sample's cell; renormalised at the ends."""
+    """Convolution with Gray's rotation profile, integrated over each cell; renormalised at the ends."""
     first = 0
     for j in range(wavelength.size):
         centre = wavelength[j]
