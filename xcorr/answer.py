@@ -41,6 +41,9 @@ class Evidence:
     ----------
     names : tuple of str
     velocity_km_s : array (n_velocity,)
+        All velocities with sums; the null of an extracted spectrum reaches beyond the searched ones.
+    searched : slice
+        Those that were searched.
     target : Sums
         One position.
     gram : array (n_molecule, n_velocity, n_molecule, n_velocity)
@@ -58,6 +61,7 @@ class Evidence:
 
     names: tuple[str, ...]
     velocity_km_s: NDArray[np.float64]
+    searched: slice
     target: Sums
     gram: NDArray[np.float64]
     nulls: Sums | None
@@ -71,6 +75,11 @@ class Evidence:
     def step_km_s(self) -> float:
         """Velocity step."""
         return float(self.velocity_km_s[1] - self.velocity_km_s[0]) if self.velocity_km_s.size > 1 else 1.0
+
+    @property
+    def searched_km_s(self) -> NDArray[np.float64]:
+        """The searched velocities."""
+        return self.velocity_km_s[self.searched]
 
     def correlation(self, m: int) -> NDArray[np.float64]:
         """Correlation of the null S/N of molecule m between velocities, (n_velocity, n_velocity)."""
@@ -155,7 +164,7 @@ def calibrated_curves(evidence: Evidence) -> Curves:
     raw_conditional = evidence.target.conditional()[0]
     null = None if evidence.nulls is None else evidence.nulls.snr()
     null_conditional = None if evidence.nulls is None else evidence.nulls.conditional()
-    index = _strongest_index(raw)
+    index = _strongest_index(raw, evidence.searched)
     far = _far(evidence, index)
     signal_free, signal_free_conditional = remove_signal(evidence, index)
     laws, conditional_laws, maxima = [], [], []
@@ -193,10 +202,10 @@ def calibrated_curves(evidence: Evidence) -> Curves:
     )
 
 
-def _strongest_index(raw: NDArray) -> int:
+def _strongest_index(raw: NDArray, searched: slice) -> int:
     """Grid velocity of the highest raw S/N of any molecule."""
-    filled = np.where(np.isfinite(raw), raw, -np.inf)
-    return int(np.unravel_index(np.argmax(filled), filled.shape)[1])
+    filled = np.where(np.isfinite(raw), raw, -np.inf)[:, searched]
+    return int(np.unravel_index(np.argmax(filled), filled.shape)[1]) + (searched.start or 0)
 
 
 def judge(
@@ -210,7 +219,8 @@ def judge(
     position_xy: tuple[float, float] | None,
 ) -> tuple[tuple[MoleculeResult, ...], list[Note]]:
     """One `MoleculeResult` per template, and the doubts."""
-    peaks = [peak(evidence.velocity_km_s, curve) for curve in curves.solo]
+    grid, window = evidence.searched_km_s, evidence.searched
+    peaks = [peak(grid, curve[window]) for curve in curves.solo]
     strongest = peaks[int(np.argmax([height for _, height, _ in peaks]))][0]
     notes: list[Note] = []
     results = []
@@ -220,7 +230,7 @@ def judge(
         curvature = velocity_curvature(evidence.correlation(m), evidence.step_km_s)
         raw = float(law.mean + snr * law.scale)
         p_local = law.p_local(raw)
-        span = float(np.ptp(evidence.velocity_km_s))
+        span = float(np.ptp(grid))
         volume = SearchVolume(span, curvature, len(evidence.names), evidence.n_positions)
         p_global, extrapolated, exceeding = combined_global_p(
             volume.p_global(p_local), snr, curves.null_maxima[m], len(evidence.names) * evidence.n_positions
@@ -232,19 +242,20 @@ def judge(
         systemic = evidence.systemic_velocity_km_s
         at_systemic = (
             float(at_velocity(evidence.velocity_km_s, curves.solo[m], systemic))
-            if systemic is not None and evidence.velocity_km_s[0] <= systemic <= evidence.velocity_km_s[-1]
+            if systemic is not None and grid[0] <= systemic <= grid[-1]
             else np.nan
         )
-        if index in (0, evidence.velocity_km_s.size - 1) and evidence.velocity_km_s.size > 2 and snr > 4:
+        if index in (0, grid.size - 1) and grid.size > 2 and snr > 4:
             notes.append(
                 Note(
                     "velocity-at-edge",
                     f"{name} peaks at the edge of the velocity range: widen [search].velocity_km_s",
                 )
             )
-        lowest = float(np.nanmin(law.snr(curves.signal_free[m])))
+        signal_free = law.snr(curves.signal_free[m][window])
+        lowest = float(np.nanmin(signal_free))
         if lowest < -4.0 - 0.5 * np.log10(max(1.0, span * np.sqrt(curvature))):
-            at = evidence.velocity_km_s[int(np.nanargmin(curves.signal_free[m]))]
+            at = grid[int(np.nanargmin(signal_free))]
             notes.append(
                 Note(
                     "negative-amplitude",

@@ -16,20 +16,22 @@ Arrays = dict[str, NDArray[Any]]
 
 def curve_arrays(evidence: Evidence, curves: Curves, molecules: Sequence[MoleculeResult]) -> Arrays:
     """Velocity grid, curves, expected autocorrelation and the null sample."""
-    best = [int(np.nanargmax(curve)) for curve in curves.solo]
+    window = evidence.searched
+    best = [int(np.nanargmax(curve[window])) + (window.start or 0) for curve in curves.solo]
     arrays: Arrays = {
-        "velocity_km_s": evidence.velocity_km_s,
+        "velocity_km_s": evidence.searched_km_s,
         "molecule": np.array(evidence.names, dtype=object),
-        "snr_curve": curves.solo,
-        "snr_raw_curve": curves.raw,
-        "conditional_curve": curves.conditional,
-        "conditional_raw_curve": curves.raw_conditional,
-        "signal_free_raw_curve": curves.signal_free,
-        "autocorrelation": np.stack([evidence.correlation(m)[:, i] for m, i in enumerate(best)]),
-        "target/num": evidence.target.num[0],
-        "target/info": evidence.target.info[0],
-        "target/joint_info": evidence.target.joint.info[0],
-        "target/joint_num": evidence.target.joint.num[0],
+        "snr_curve": curves.solo[:, window],
+        "snr_raw_curve": curves.raw[:, window],
+        "conditional_curve": curves.conditional[:, window],
+        "conditional_raw_curve": curves.raw_conditional[:, window],
+        "null/signal_free_raw_curve": curves.signal_free,
+        "null/velocity_km_s": evidence.velocity_km_s,
+        "autocorrelation": np.stack([evidence.correlation(m)[window, i] for m, i in enumerate(best)]),
+        "target/num": evidence.target.num[0][:, window],
+        "target/info": evidence.target.info[0][:, window],
+        "target/joint_info": evidence.target.joint.info[0][:, window],
+        "target/joint_num": evidence.target.joint.num[0][:, window],
         "null/maxima": curves.null_maxima,
         "null/mean": np.array([law.mean for law in curves.laws]),
         "null/std": np.array([law.std for law in curves.laws]),
@@ -72,11 +74,12 @@ def map_arrays(
 
 
 def exposure_arrays(
-    i: int, record: Mapping[str, Any], molecules: Sequence[MoleculeResult], velocity_km_s: NDArray
+    i: int, record: Mapping[str, Any], molecules: Sequence[MoleculeResult], evidence: Evidence
 ) -> Arrays:
     """One exposure: its spectrum at the companion, fitted templates, star, transmission and sums."""
     exposure, templates = record["exposure"], record["templates"]
-    at = [int(np.argmin(np.abs(velocity_km_s - molecule.velocity_km_s))) for molecule in molecules]
+    at = [int(np.argmin(np.abs(evidence.velocity_km_s - molecule.velocity_km_s))) for molecule in molecules]
+    window = evidence.searched
     base = f"exposure/{i}"
     nan = float("nan")
     arrays: Arrays = {
@@ -93,8 +96,8 @@ def exposure_arrays(
         f"{base}/companion_xy": np.array(record["position_xy"], float),
         f"{base}/star_xy": np.array(exposure.star_xy or (nan, nan), float),
         f"{base}/psf_fwhm_pixels": np.array(nan if exposure.psf is None else exposure.psf.fwhm_pixels),
-        f"{base}/target_num": record["target"].num[0],
-        f"{base}/target_info": record["target"].info[0],
+        f"{base}/target_num": record["target"].num[0][:, window],
+        f"{base}/target_info": record["target"].info[0][:, window],
         f"{base}/noise_audit": np.array(
             [
                 exposure.audit.scatter_over_claimed,

@@ -258,7 +258,7 @@ def _gram(channel: Channel, stamps: Stamps) -> NDArray[np.float64]:
     n_column = templates.columns.shape[0] * templates.columns.shape[1]
     flat = np.vstack([templates.columns.reshape(n_column, -1), templates.continuum])
     _, second = _first_and_second(channel.exposure, stamps)
-    full = ((flat * second[0]) @ flat.T).astype(np.float64)
+    full = (flat * second[0]) @ flat.T
     overlaps, extras = support_overlaps(weights, nuisance, flat)
     whiten_overlaps(overlaps, extras, fit.band, fit.scale, fit.border, fit.corner, fit.corner_scale)
     rows = np.concatenate([overlaps, extras]) if len(extras) else overlaps

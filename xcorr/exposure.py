@@ -14,6 +14,7 @@ from xcorr.errors import CoverageError, InputError, Note
 from xcorr.kernels.reference import project
 from xcorr.noise import (
     MIN_SPAXELS,
+    OUTLIER_SIGMA,
     NoiseAudit,
     audit,
     flag_outliers,
@@ -39,9 +40,9 @@ from xcorr.units import BOLTZMANN_J_K, LIGHT_KM_S, LIGHT_M_S, PLANCK_J_S
 
 DEFAULT_FWHM_PIXELS = 2.5
 DEFAULT_STAR_T_EFF = 6000.0
-DEFAULT_RESOLVING_POWER = None
 FINE_GRID_R = 250_000.0
 EXCLUSION_FWHM = 1.5
+SCATTER_CHANNELS = 101
 
 
 @dataclass(frozen=True)
@@ -135,6 +136,7 @@ class PreparedExposure:
     companion_knots: int
     source: str = ""
     notes: tuple[Note, ...] = field(default=())
+    claimed_weights: NDArray[np.float32] | None = None
 
     def restricted(self, covered: NDArray[np.bool_]) -> PreparedExposure:
         """The same exposure with other channels taken out, its starlight fitted again.
@@ -151,19 +153,37 @@ class PreparedExposure:
             self, weights=weights, residual=fit.residual, fit=fit, mean_weights=mean_weights(weights)
         )
 
-    def without(self, outliers: NDArray[np.bool_]) -> PreparedExposure:
-        """The same exposure with samples (n_spaxel, n_wave) taken out, its starlight fitted again."""
-        weights = np.where(outliers, np.float32(0.0), self.weights)
+    def reweighted(self, signal: NDArray[np.float64]) -> PreparedExposure:
+        """An extracted spectrum with weights from its own scatter once the fitted signal is taken out.
+
+        Lines that no template knows, not noise, limit bright spectra: the running scatter of what remains takes
+        the place of claimed variances below it, and single samples far off it are dropped.
+
+        Parameters
+        ----------
+        signal : array (n_wave,)
+            Fitted template columns, projected.
+        """
+        good = self.weights[0] > 0
+        remaining = np.where(good, self.residual[0] - signal, 0.0)
+        scatter = running_variance(remaining, good, SCATTER_CHANNELS)
+        outlier = good & (np.abs(remaining) > OUTLIER_SIGMA * np.sqrt(scatter))
+        variance = np.maximum(scatter, np.divide(1.0, self.claimed, out=np.zeros_like(scatter), where=good))
+        weights = np.where(good & ~outlier, 1.0 / variance, 0.0).astype(np.float32)[None]
         fit = fit_spaxels(self.residual, weights, self.nuisance)
-        fraction = self.audit.flagged_fraction + float(outliers.sum()) / max(1, int((self.weights > 0).sum()))
         return replace(
             self,
             weights=weights,
             residual=fit.residual,
             fit=fit,
             mean_weights=mean_weights(weights),
-            audit=replace(self.audit, flagged_fraction=fraction),
+            audit=replace(self.audit, flagged_fraction=float(outlier.sum() / max(1, good.sum()))),
         )
+
+    @property
+    def claimed(self) -> NDArray[np.float32]:
+        """Weights (n_wave,) of an extracted spectrum as the file claims them."""
+        return self.weights[0] if self.claimed_weights is None else self.claimed_weights
 
 
 def prepare(cube: Cube, scenery: Scenery, settings: StarlightSettings) -> PreparedExposure:
@@ -182,9 +202,9 @@ def prepare(cube: Cube, scenery: Scenery, settings: StarlightSettings) -> Prepar
     share = usable.mean(axis=0)
     white = _white_image(cube, usable)
     star_image, psf, star_xy = _star_and_psf(cube, usable, white, scenery, no_star, notes)
-    spectra = np.ascontiguousarray(cube.data.reshape(n_wave, -1).T)
-    good = np.ascontiguousarray(usable.reshape(n_wave, -1).T)
-    claimed = None if cube.variance is None else np.ascontiguousarray(cube.variance.reshape(n_wave, -1).T)
+    spectra = np.array(cube.data.reshape(n_wave, -1).T, order="C")
+    good = np.array(usable.reshape(n_wave, -1).T, order="C")
+    claimed = None if cube.variance is None else np.array(cube.variance.reshape(n_wave, -1).T, order="C")
     weights = _first_weights(spectra, good, claimed)
     star = _star(cube, settings, spectra, weights, white, share, scenery, psf, no_star)
     weights[:, ~star.known] = 0.0
@@ -235,6 +255,7 @@ def prepare(cube: Cube, scenery: Scenery, settings: StarlightSettings) -> Prepar
         companion_knots=settings.companion_knots,
         source=cube.source,
         notes=tuple(notes),
+        claimed_weights=weights[0].copy() if cube.is_spectrum else None,
     )
 
 
@@ -598,7 +619,10 @@ class TemplateColumns:
 
 
 def template_columns(
-    exposure: PreparedExposure, templates: Sequence[Template], velocity_km_s: NDArray
+    exposure: PreparedExposure,
+    templates: Sequence[Template],
+    velocity_km_s: NDArray,
+    searched: slice = slice(None),
 ) -> TemplateColumns:
     """Columns t(v) = c * channel{ LSF (x) [F(v) T] } of every template, and the companion continuum.
 
@@ -608,6 +632,8 @@ def template_columns(
     templates : sequence of Template
     velocity_km_s : array (n_velocity,)
         Barycentric.
+    searched : slice
+        Velocities at which the templates must cover a channel; beyond (null velocities) an end value is held.
 
     Raises
     ------
@@ -621,7 +647,7 @@ def template_columns(
     covered = np.zeros((len(templates), n_wave), bool)
     for m, template in enumerate(templates):
         operator = _operator_for(exposure, template)
-        covered[m] = covered_channels(operator, template.wavelength_um, shifts, template.covered)
+        covered[m] = covered_channels(operator, template.wavelength_um, shifts[searched], template.covered)
         if covered[m][used].mean() < 0.5:
             raise CoverageError(
                 f"template {template.name!r} covers too few channels of {exposure.source or 'the exposure'}",
@@ -674,22 +700,3 @@ def _one_template(
     if exposure.transmission_hi is None:
         columns *= exposure.transmission
     return columns * exposure.throughput
-
-
-def running_outliers(
-    exposure: PreparedExposure, signal: NDArray[np.float64], limit: float
-) -> NDArray[np.bool_]:
-    """Outliers of an extracted spectrum after its fitted signal is taken out, against the running scatter.
-
-    Parameters
-    ----------
-    exposure : PreparedExposure
-        One spaxel.
-    signal : array (n_wave,)
-        Fitted template columns, projected.
-    limit : float
-        In running robust sigma.
-    """
-    remaining = exposure.residual[0] - signal
-    scale = np.sqrt(running_variance(remaining, exposure.weights[0] > 0, 101))
-    return ((np.abs(remaining) > limit * scale) & (exposure.weights[0] > 0))[None]

@@ -20,6 +20,7 @@ from xcorr.psf import Psf, Stamps, find_peak, moffat_of_width, sampled_psf
 from xcorr.results import InputFile
 from xcorr.star import StarSpectrum
 from xcorr.template import Template
+from xcorr.units import LIGHT_KM_S
 
 READ_KEYS = (
     *("resolving_power", "barycentric_velocity_km_s", "time", "site", "coordinates", "medium", "air_formula"),
@@ -173,11 +174,13 @@ class Exposures:
             star_t_eff=entry.star_t_eff,
         )
 
-    def templates(self, cube: Cube) -> tuple[Template, ...]:
-        """Built-in templates on the cube's range, then the user's."""
+    def templates(self, cube: Cube, reach_km_s: float) -> tuple[Template, ...]:
+        """Built-in templates on the cube's range, shifted by up to `reach_km_s`, then the user's."""
         search = self.settings.search
-        low = np.floor(cube.wavelength_um.min() / RANGE_STEP_UM) * RANGE_STEP_UM
-        high = np.ceil(cube.wavelength_um.max() / RANGE_STEP_UM) * RANGE_STEP_UM
+        # built-in templates are padded by themselves up to 1500 km/s, LSF wings included
+        more = 1.0 + max(0.0, reach_km_s - 1000.0) / LIGHT_KM_S
+        low = np.floor(cube.wavelength_um.min() / more / RANGE_STEP_UM) * RANGE_STEP_UM
+        high = np.ceil(cube.wavelength_um.max() * more / RANGE_STEP_UM) * RANGE_STEP_UM
         built = [
             builtin_template(
                 name,

@@ -17,10 +17,9 @@ from xcorr.config import Settings, check_molecules, load_settings
 from xcorr.cube import Cube
 from xcorr.engine import ExposureEngine, Sums, add
 from xcorr.errors import CoverageError, Note
-from xcorr.exposure import PreparedExposure, prepare, running_outliers, template_columns
+from xcorr.exposure import PreparedExposure, prepare, template_columns
 from xcorr.inputs import Exposures, describe_position
 from xcorr.kernels.threads import limited_threads
-from xcorr.noise import OUTLIER_SIGMA
 from xcorr.provenance import versions
 from xcorr.results import RunResult
 from xcorr.significance import ring_positions
@@ -28,6 +27,10 @@ from xcorr.template import Template
 
 log = logging.getLogger("xcorr.pipeline")
 Progress = Callable[[int, int, str], None]
+REWEIGHTINGS = 2
+NULL_REACH_KM_S = 2000.0
+"""An extracted spectrum has no other positions: its null reaches this far beyond the searched velocities."""
+MAX_NULL_VELOCITIES = 1500
 
 
 def run(
@@ -70,9 +73,8 @@ def run(
     report = progress or (lambda done, total, what: None)
     with limited_threads(jobs or settings.run.jobs):
         exposures = Exposures(settings, cubes, templates)
-        velocities = np.array(settings.velocity_grid())
-        search = _search(exposures, velocities, maps, report)
-        return _answer(search, exposures, velocities)
+        search = _search(exposures, np.array(settings.velocity_grid()), maps, report)
+        return _answer(search, exposures)
 
 
 @dataclass
@@ -80,6 +82,8 @@ class _Search:
     """What the pass over the exposures gathers (positions in pixels of exposure 1)."""
 
     templates: tuple[Template, ...]
+    velocity_km_s: NDArray[np.float64]
+    searched: slice
     map_xy: NDArray[np.int64]
     n_positions: int
     target_xy: tuple[float, float] | None = None
@@ -91,11 +95,24 @@ class _Search:
     notes: list[Note] = field(default_factory=list)
 
 
+def _null_grid(velocity_km_s: NDArray) -> tuple[NDArray[np.float64], slice]:
+    """The searched velocities extended on both sides at the same step, and where they lie in it."""
+    n = velocity_km_s.size
+    if n < 2:
+        return velocity_km_s, slice(0, n)
+    step = velocity_km_s[1] - velocity_km_s[0]
+    more = min(int(NULL_REACH_KM_S / step), max(0, (MAX_NULL_VELOCITIES - n) // 2))
+    below = velocity_km_s[0] - step * np.arange(more, 0, -1)
+    above = velocity_km_s[-1] + step * np.arange(1, more + 1)
+    return np.concatenate([below, velocity_km_s, above]), slice(more, more + n)
+
+
 class _Engines:
     """Engines of the exposures, kept where the memory allows it and made again where it does not."""
 
     def __init__(self, exposures: Exposures, velocities: NDArray) -> None:
         self.exposures, self.velocities = exposures, velocities
+        self.searched = slice(0, velocities.size)
         self.held: dict[int, ExposureEngine] = {}
         self.templates: tuple[Template, ...] = ()
 
@@ -110,13 +127,15 @@ class _Engines:
     def _make(self, i: int) -> ExposureEngine:
         """Read, prepare and project one exposure."""
         cube = self.exposures.cube(i)
-        templates = self.exposures.templates(cube)
+        if i == 0 and cube.is_spectrum:
+            self.velocities, self.searched = _null_grid(self.velocities)
+        templates = self.exposures.templates(cube, float(np.abs(self.velocities).max()))
         if i == 0:
             self.templates = templates
         scenery, starlight = self.exposures.scenery(i, cube), self.exposures.starlight(cube)
         prepared = prepare(cube, scenery, starlight)
         del cube  # its planes are copied into the exposure: free them before the templates come
-        return ExposureEngine(prepared, template_columns(prepared, templates, self.velocities))
+        return ExposureEngine(prepared, template_columns(prepared, templates, self.velocities, self.searched))
 
 
 def _search(exposures: Exposures, velocities: NDArray, maps: bool, report: Progress) -> _Search:
@@ -125,7 +144,7 @@ def _search(exposures: Exposures, velocities: NDArray, maps: bool, report: Progr
     engines = _Engines(exposures, velocities)
     first = engines[0]
     exposures.first_star = first.exposure.star_xy
-    found = _Search(engines.templates, np.zeros((0, 2), np.int64), 1)
+    found = _Search(engines.templates, engines.velocities, engines.searched, np.zeros((0, 2), np.int64), 1)
     found.target_xy = (0.0, 0.0) if exposures.is_spectrum else exposures.position(0, first.exposure)
     blind = found.target_xy is None
     if (maps or blind) and not exposures.is_spectrum:
@@ -218,11 +237,11 @@ def _add_target(found: _Search, exposures: Exposures, engine: ExposureEngine, i:
     if target_xy is None:
         target_xy = tuple(exposures.to_exposure(i, engine.exposure, np.array([found.target_xy]))[0])
     position = np.array([target_xy], float)
-    target, gram = engine.sums(position), engine.gram(position)
+    target = engine.sums(position)
     if exposures.is_spectrum:
-        robust = _without_outliers(engine, target)
-        if robust is not engine:
-            engine, target, gram = robust, robust.sums(position), robust.gram(position)
+        engine = _reweighted(engine, target, found.searched)
+        target = engine.sums(position)
+    gram = engine.gram(position)
     found.gram = gram if found.gram is None else found.gram + gram
     nulls, null_correlation = None, np.eye(1)
     if len(found.nulls_xy):
@@ -263,15 +282,16 @@ def _without_planes(exposure: PreparedExposure) -> PreparedExposure:
     return replace(exposure, weights=plane, residual=plane, fit=fit)
 
 
-def _without_outliers(engine: ExposureEngine, target: Sums) -> ExposureEngine:
+def _reweighted(engine: ExposureEngine, target: Sums, searched: slice) -> ExposureEngine:
     """Robust weights of an extracted spectrum: residuals with the templates fitted, then frozen."""
-    snr = np.where(np.isfinite(target.snr()[0]), target.snr()[0], -np.inf)
-    index = int(np.unravel_index(np.argmax(snr), snr.shape)[1])
-    signal = fitted_signal(target, index) @ engine.joint.templates.columns[:, index].astype(float)
-    outliers = running_outliers(engine.exposure, signal, OUTLIER_SIGMA)
-    if not outliers.any():
-        return engine
-    return ExposureEngine(engine.exposure.without(outliers), engine.columns)
+    position = np.zeros((1, 2))
+    for _ in range(REWEIGHTINGS):
+        snr = np.where(np.isfinite(target.snr()[0]), target.snr()[0], -np.inf)[:, searched]
+        index = int(np.unravel_index(np.argmax(snr), snr.shape)[1]) + (searched.start or 0)
+        signal = fitted_signal(target, index) @ engine.joint.templates.columns[:, index].astype(float)
+        engine = ExposureEngine(engine.exposure.reweighted(signal), engine.columns)
+        target = engine.sums(position)
+    return engine
 
 
 def _null_correlation(engine: ExposureEngine, positions_xy: NDArray) -> NDArray[np.float64]:
@@ -286,7 +306,7 @@ def _null_correlation(engine: ExposureEngine, positions_xy: NDArray) -> NDArray[
     return gram / scale[:, None] / scale[None, :]
 
 
-def _evidence(search: _Search, exposures: Exposures, velocities: NDArray) -> Evidence:
+def _evidence(search: _Search, exposures: Exposures) -> Evidence:
     """Sums over exposures, and what the verdicts need besides."""
     prepared = [record["exposure"] for record in search.records]
     fits = [e.telluric for e in prepared if e.telluric is not None and e.telluric.usable]
@@ -295,7 +315,8 @@ def _evidence(search: _Search, exposures: Exposures, velocities: NDArray) -> Evi
     assert search.gram is not None  # set with the first exposure
     evidence = Evidence(
         names=exposures.settings.names,
-        velocity_km_s=velocities,
+        velocity_km_s=search.velocity_km_s,
+        searched=search.searched,
         target=add([record["target"] for record in search.records]),
         gram=search.gram,
         nulls=None if nulls[0] is None else add(nulls),
@@ -316,11 +337,11 @@ def _evidence(search: _Search, exposures: Exposures, velocities: NDArray) -> Evi
     return evidence
 
 
-def _answer(search: _Search, exposures: Exposures, velocities: NDArray) -> RunResult:
+def _answer(search: _Search, exposures: Exposures) -> RunResult:
     """Calibrate, judge and put everything together."""
     settings = exposures.settings
     prepared = [record["exposure"] for record in search.records]
-    evidence = _evidence(search, exposures, velocities)
+    evidence = _evidence(search, exposures)
     curves = calibrated_curves(evidence)
     in_star_units = all(e.amplitude_in_star_units for e in prepared)
     molecules, notes = judge(
@@ -338,11 +359,17 @@ def _answer(search: _Search, exposures: Exposures, velocities: NDArray) -> RunRe
     arrays = curve_arrays(evidence, curves, molecules)
     if search.map_num is not None and search.map_info is not None:
         arrays |= map_arrays(
-            search.map_num, search.map_info, search.map_xy, prepared[0].shape, velocities, curves, molecules
+            search.map_num,
+            search.map_info,
+            search.map_xy,
+            prepared[0].shape,
+            search.velocity_km_s,
+            curves,
+            molecules,
         )
     arrays["null/positions_xy"] = search.nulls_xy
     for i, record in enumerate(search.records):
-        arrays |= exposure_arrays(i, record, molecules, velocities)
+        arrays |= exposure_arrays(i, record, molecules, evidence)
     return RunResult(
         target=settings.target.name,
         frame="barycentric",
