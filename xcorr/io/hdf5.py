@@ -14,6 +14,7 @@ from xcorr.errors import CoverageError, InputError
 from xcorr.io.celestial import field_position
 from xcorr.io.cubes import settle
 from xcorr.io.frames import BARYCENTRIC_CARD, barycentric_km_s, spectral_frame
+from xcorr.io.hdf5_guard import hdf5_guard
 from xcorr.io.medium import decide_medium, to_vacuum
 from xcorr.io.overrides import Overrides
 from xcorr.io.rawtable import plain_attribute
@@ -33,7 +34,7 @@ _ERRORS = {
     "ivar": "inverse_variance",
 }
 _QUALITY = ("mask", "quality", "dq")
-_FAULTS = (OSError, KeyError, RuntimeError)
+
 _BLOCK = 64
 
 
@@ -47,14 +48,8 @@ def read_hdf5_cube(path: Path, overrides: Overrides) -> Cube:
     """Read an HDF5 cube or spectrum; see `xcorr.io.read_cube`."""
     import h5py
 
-    try:
-        with h5py.File(path, "r") as file:
-            return _read(file, path, overrides)
-    except _FAULTS as error:
-        message = str(error).strip().splitlines() or [type(error).__name__]
-        raise InputError(
-            "HDF5 file cannot be read", f"{path.name}: {message[0][:120]}", "check the file"
-        ) from error
+    with hdf5_guard(path), h5py.File(path, "r") as file:
+        return _read(file, path, overrides)
 
 
 def _attributes(item: Any) -> dict[str, Any]:
@@ -68,7 +63,7 @@ def _dataset(file: Any, names: Any, role: str, override: Any) -> tuple[str, Any]
         found = file.get(override) if isinstance(override, str) else None
         if not isinstance(found, h5py.Dataset):
             raise InputError(
-                f"{role}_extension is not in the file", repr(override), f"it holds {', '.join(file)}"
+                f"{role}_extension is not in the file", repr(override), f"it holds {_names(file)}"
             )
         return str(override), found
     for name in names:
@@ -80,9 +75,7 @@ def _dataset(file: Any, names: Any, role: str, override: Any) -> tuple[str, Any]
 def _read(file: Any, path: Path, overrides: Overrides) -> Cube:
     science = _dataset(file, _DATA, "science", overrides.science_extension)
     if science is None:
-        raise InputError(
-            f"{path.name} has no dataset data or flux", ", ".join(file)[:80], "see docs/file-formats.md"
-        )
+        raise InputError(f"{path.name} has no dataset data or flux", _names(file), "see docs/file-formats.md")
     data = science[1]
     if data.ndim not in (1, 3) or data.size == 0 or data.dtype.kind not in "iuf":
         raise InputError(
@@ -95,19 +88,18 @@ def _read(file: Any, path: Path, overrides: Overrides) -> Cube:
         raise InputError(
             "one wavelength per channel needed", f"{wavelength.shape} for {data.shape}", "check the file"
         )
-    order = (
-        np.asarray(file["order"][()], np.int16) if "order" in file else np.zeros(wavelength.size, np.int16)
-    )
+    order = _order(file, wavelength.size, path.name)
     keep = _kept(wavelength, order, overrides)
     samples, used = _samples(file, science, keep, wavelength[keep], overrides, root)
     shape = samples.data.shape
     celestial = _group(file, "celestial") or None
     frame, frame_notes = _frame(root, overrides)
-    if "barycentric_velocity_km_s" in root:
-        cards[BARYCENTRIC_CARD] = root["barycentric_velocity_km_s"]
+    velocity = _number(root, "barycentric_velocity_km_s")
+    if velocity is not None:
+        cards[BARYCENTRIC_CARD] = velocity
     z_b, velocity_notes = barycentric_km_s(cards, overrides, _position(celestial))
     resolving, r_notes = _resolving(file, keep, wavelength[keep], cards, shape, overrides)
-    gain = overrides.gain_e_per_unit if overrides.gain_e_per_unit is not None else root.get("gain_e_per_unit")
+    gain = overrides.gain_e_per_unit or _number(root, "gain_e_per_unit")
     used |= {"spectral_axis": f"wavelength in {unit}, {medium}"}
     return Cube(
         data=samples.data,
@@ -120,7 +112,7 @@ def _read(file: Any, path: Path, overrides: Overrides) -> Cube:
         barycentric_velocity_km_s=z_b,
         scale_exponent=samples.scale_exponent,
         unit=str(root.get("unit", "")),
-        gain_e_per_unit=None if gain is None else float(gain),
+        gain_e_per_unit=gain,
         telluric_corrected=_flag(overrides.telluric_corrected, root, "telluric_corrected"),
         starlight_removed=_flag(overrides.starlight_removed, root, "starlight_removed"),
         celestial_header=celestial,
@@ -130,6 +122,45 @@ def _read(file: Any, path: Path, overrides: Overrides) -> Cube:
         planes=used,
         notes=(*notes, *frame_notes, *velocity_notes, *r_notes, *samples.notes),
     )
+
+
+def _names(file: Any) -> str:
+    """What the file holds, for messages."""
+    return ", ".join(str(name) for name in file)[:80] or "nothing"
+
+
+def _values(file: Any, name: str, dtype: Any = np.float64) -> NDArray[Any]:
+    """A small numeric dataset, whole."""
+    import h5py
+
+    item = file[name]
+    if not isinstance(item, h5py.Dataset) or item.dtype.kind not in "iuf":
+        raise InputError(
+            f"{name} must be a dataset of numbers", type(item).__name__, "see docs/file-formats.md"
+        )
+    return np.asarray(item[()], dtype=dtype)
+
+
+def _order(file: Any, n_wave: int, name: str) -> NDArray[np.int16]:
+    if "order" not in file:
+        return np.zeros(n_wave, np.int16)
+    order = _values(file, "order", np.int64)
+    if order.shape != (n_wave,) or order.dtype.kind not in "iu":
+        got = f"{order.dtype} {order.shape}"
+        raise InputError(
+            f"{name}: dataset order must hold one whole number per channel", got, "mend the file"
+        )
+    return order.astype(np.int16)
+
+
+def _number(root: Mapping[str, Any], key: str) -> float | None:
+    """A numeric root attribute; absent: None."""
+    value = root.get(key)
+    if value is None:
+        return None
+    if isinstance(value, bool) or not isinstance(value, int | float) or not abs(value) < 1e6:
+        raise InputError(f"HDF5 attribute {key} must be a number", repr(value)[:40], "mend the file")
+    return float(value)
 
 
 def _flag(override: bool | None, root: Mapping[str, Any], name: str) -> bool:
@@ -155,9 +186,7 @@ def _wavelength(
     file: Any, path: Path, root: Mapping[str, Any], overrides: Overrides
 ) -> tuple[NDArray[np.float64], str, str, list[Any]]:
     if "wavelength" not in file:
-        raise InputError(
-            f"{path.name} has no dataset wavelength", ", ".join(file)[:80], "see docs/file-formats.md"
-        )
+        raise InputError(f"{path.name} has no dataset wavelength", _names(file), "see docs/file-formats.md")
     attributes = _attributes(file["wavelength"])
     unit = overrides.wavelength_unit or str(attributes.get("unit") or attributes.get("units") or "")
     if not unit:
@@ -169,7 +198,7 @@ def _wavelength(
         raise InputError(f"{path.name}: wavelengths must be lengths", repr(unit), "convert them")
     stated = {"MEDIUM": attributes.get("medium") or root.get("medium") or ""}
     medium, notes = decide_medium(overrides.medium, "", stated, path.name)
-    values = np.asarray(file["wavelength"][()], dtype=np.float64) * (parsed.to_si * 1e6)
+    values = _values(file, "wavelength") * (parsed.to_si * 1e6)
     if not np.all(np.isfinite(values)) or values.size == 0 or values.min() < 0.01 or values.max() > 1000:
         raise InputError(
             f"{path.name}: wavelengths not finite or outside 0.01-1000 um", unit, "check the unit"
@@ -220,7 +249,7 @@ def _samples(
     name, data = science
     shape = (wavelength.size, data.shape[1], data.shape[2]) if data.ndim == 3 else (wavelength.size, 1, 1)
     used = {"science": name}
-    exponent = int(root.get("scale_exponent", 0))
+    exponent = round(_number(root, "scale_exponent") or 0)
     samples = read_data(shape, _chunks(data, keep, shape), stored_exponent=exponent)
     quality = _dataset(file, _QUALITY, "quality", overrides.quality_extension)
     if quality is not None:
@@ -258,8 +287,13 @@ def _resolving(
     overrides: Overrides,
 ) -> tuple[NDArray[np.float64] | None, list[Any]]:
     if overrides.resolving_power is None and "resolving_power" in file:
-        values = np.asarray(file["resolving_power"][()], dtype=np.float64)
+        values = _values(file, "resolving_power")
         if values.ndim == 0:
             return np.full(wavelength.size, float(values)), []
+        n_wave = file["wavelength"].shape[0]
+        if values.shape != (n_wave,) and values.shape != (n_wave, *shape[1:]):
+            raise InputError(
+                "dataset resolving_power has the wrong shape", f"{values.shape}", "one per channel"
+            )
         return np.ascontiguousarray(values[keep]), []
     return resolving_power(overrides.resolving_power, cards, wavelength, (shape[0], shape[1], shape[2]))

@@ -13,11 +13,12 @@ from numpy.typing import NDArray
 
 from xcorr.errors import InputError
 from xcorr.io.fitsfile import FITS_FAULTS, FitsFile, Hdu
+from xcorr.io.hdf5_guard import hdf5_guard
 from xcorr.io.spectral_axis import find_world_axis
 
-# what the ECSV reader and h5py raise on damaged files
+# what the ECSV reader raises on damaged files
 _ECSV_FAULTS = (ValueError, TypeError, KeyError, IndexError, OSError, AttributeError)
-_HDF5_FAULTS = (OSError, ValueError, TypeError, KeyError, RuntimeError, OverflowError)
+
 _TEXT_LIMIT = 1 << 29
 _ROW_NAMES = ("wavelength", "flux", "error", "flag")
 _KEY_VALUE = re.compile(r"^\s*([A-Za-z][\w .-]*?)\s*[:=]\s*(.+?)\s*$")
@@ -159,30 +160,27 @@ def _hdf5(path: Path) -> RawTable:
     import h5py
 
     columns, units = {}, {}
-    try:
-        with h5py.File(path, "r") as file:
-            meta = {str(key).upper(): plain_attribute(value) for key, value in file.attrs.items()}
-            for name, item in file.items():
-                if not isinstance(item, h5py.Dataset) or item.dtype.kind not in "iufb":
-                    continue
-                if item.size > 1 and item.size == max(item.shape):
-                    columns[name] = np.asarray(item[()]).ravel()
-                    for key in ("unit", "units"):
-                        if key in item.attrs:
-                            units[name] = str(plain_attribute(item.attrs[key]))
-                    if "medium" in item.attrs:
-                        meta["MEDIUM"] = str(plain_attribute(item.attrs["medium"]))
-    except _HDF5_FAULTS as error:
-        raise InputError(
-            "HDF5 file cannot be read", f"{path.name}: {str(error)[:100]}", "check the file"
-        ) from error
+    with hdf5_guard(path), h5py.File(path, "r") as file:
+        meta = {str(key).upper(): plain_attribute(value) for key, value in file.attrs.items()}
+        for name, item in file.items():
+            if not isinstance(item, h5py.Dataset) or item.dtype.kind not in "iufb":
+                continue
+            if item.size > 1 and item.size == max(item.shape):
+                columns[name] = np.asarray(item[()]).ravel()
+                for key in ("unit", "units"):
+                    if key in item.attrs:
+                        units[name] = str(plain_attribute(item.attrs[key]))
+                if "medium" in item.attrs:
+                    meta["MEDIUM"] = str(plain_attribute(item.attrs["medium"]))
+    longest = max((values.size for values in columns.values()), default=0)
+    columns = {name: values for name, values in columns.items() if values.size == longest}
     return RawTable(columns, units, meta, "HDF5 spectrum")
 
 
 def plain_attribute(value: Any) -> Any:
     """An HDF5 attribute as a plain Python value."""
     if isinstance(value, bytes):
-        return value.decode("utf-8", "replace")
+        return value.decode("utf-8", "replace").strip()
     if isinstance(value, np.generic):
         return value.item()
     return value

@@ -13,6 +13,7 @@ from xcorr.errors import InputError
 from xcorr.io.cubes import read_fits_cube
 from xcorr.io.fitsfile import FitsFile
 from xcorr.io.hdf5 import is_hdf5, read_hdf5_cube
+from xcorr.io.hdf5_guard import hdf5_guard
 from xcorr.io.overrides import Overrides, existing_file, overrides_from
 from xcorr.io.rawtable import is_rows_image, is_spectrum_table
 from xcorr.io.spectra import read_columns_spectrum
@@ -194,13 +195,8 @@ def _is_hdf5_cube(path: Path) -> bool:
     """Whether an HDF5 file holds data of three axes."""
     import h5py
 
-    try:
-        with h5py.File(path, "r") as file:
-            return any(isinstance(file.get(n), h5py.Dataset) and file[n].ndim == 3 for n in ("data", "flux"))
-    except (OSError, KeyError, TypeError, ValueError, RuntimeError) as error:
-        raise InputError(
-            "HDF5 file cannot be read", f"{path.name}: {str(error)[:100]}", "check the file"
-        ) from error
+    with hdf5_guard(path), h5py.File(path, "r") as file:
+        return any(isinstance(file.get(n), h5py.Dataset) and file[n].ndim == 3 for n in ("data", "flux"))
 
 
 def _is_image_exposure(file: FitsFile, settings: Overrides) -> bool:

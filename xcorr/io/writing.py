@@ -190,14 +190,15 @@ def _spatial_cards(cube: Cube, spectral: int) -> dict[str, Any]:
 def _write_hdf5(path: Path, cube: Cube) -> None:
     import h5py
 
-    with h5py.File(path, "w", track_order=True) as file:
+    with h5py.File(path, "w") as file:
 
         def put(name: str, values: NDArray[Any]) -> Any:
             return file.create_dataset(name, data=values, track_times=False)
 
-        file.attrs["schema"] = SCHEMA
-        file.attrs["frame"] = cube.frame
-        file.attrs["unit"] = cube.unit
+        # fixed-length text: it needs no heap in the file, so damage elsewhere cannot reach it
+        file.attrs["schema"] = np.bytes_(SCHEMA)
+        file.attrs["frame"] = np.bytes_(cube.frame)
+        file.attrs["unit"] = np.bytes_((cube.unit or " ").encode())
         file.attrs["scale_exponent"] = cube.scale_exponent
         file.attrs["telluric_corrected"] = cube.telluric_corrected
         file.attrs["starlight_removed"] = cube.starlight_removed
@@ -210,15 +211,16 @@ def _write_hdf5(path: Path, cube: Cube) -> None:
             put("variance", cube.variance)
         put("mask", cube.mask.astype(np.uint8))
         wavelength = put("wavelength", cube.wavelength_um)
-        wavelength.attrs["unit"] = "um"
-        wavelength.attrs["medium"] = "vacuum"
+        wavelength.attrs["unit"] = np.bytes_("um")
+        wavelength.attrs["medium"] = np.bytes_("vacuum")
         if cube.order is not None:
             put("order", cube.order)
         if cube.resolving_power is not None:
             put("resolving_power", cube.resolving_power)
         for name, cards in (("celestial", cube.celestial_header), ("header", cube.header)):
             if cards:
-                group = file.create_group(name, track_order=True)
+                group = file.create_group(name)
                 for key, value in cards.items():
                     if isinstance(value, str | int | float | bool):
-                        group.attrs[key] = value
+                        text = isinstance(value, str)
+                        group.attrs[key] = np.bytes_((str(value) or " ").encode()) if text else value
