@@ -211,13 +211,17 @@ def _spectra(
         return stored
     mixtures = _mixtures(dict(ratios), floor)
     structure = grey_structure(t_eff, log_g, n_layers=n_layers)
-    spectra = emergent_spectra(wavelength_grid(low, high), structure, mixtures)
+    silent = {f"without {molecule}": molecule for molecule in BUILTIN_MOLECULES}
+    spectra = emergent_spectra(wavelength_grid(low, high), structure, mixtures, silent=silent)
     cache.store(key, spectra)
     return spectra
 
 
 def _mixtures(ratios: dict[str, float], floor: float) -> dict[str, dict[str, float]]:
-    """Label -> mixing ratios of the spectra needed for every template and form."""
+    """Label -> mixing ratios of the spectra needed for every template and form.
+
+    "without X" is the same gas with X transparent: a molecule without lines contributes exactly nothing.
+    """
     mixtures = {FULL: ratios}
     for molecule in BUILTIN_MOLECULES:
         used = max(ratios.get(molecule, 0.0), floor)
@@ -225,7 +229,7 @@ def _mixtures(ratios: dict[str, float], floor: float) -> dict[str, dict[str, flo
             continue
         others = {name: value for name, value in ratios.items() if name != molecule}
         mixtures[f"with {molecule}"] = others | {molecule: used}
-        mixtures[f"without {molecule}"] = others
+        mixtures[f"without {molecule}"] = others | {molecule: used}
         mixtures[f"only {molecule}"] = {molecule: used}
     return mixtures
 

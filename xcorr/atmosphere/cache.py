@@ -40,8 +40,11 @@ def code_digest() -> str:
 def load(key: str) -> dict[str, NDArray[np.float64]] | None:
     """Arrays stored under a key; None where there are none, or where the file is damaged."""
     try:
-        # the zip container's CRC guards the bytes
-        with np.load(cache_folder() / f"{key}.npz", allow_pickle=False) as stored:
+        # opened here: np.load leaves its own handle open on a truncated file. The zip CRC guards the bytes
+        with (
+            open(cache_folder() / f"{key}.npz", "rb") as stream,
+            np.load(stream, allow_pickle=False) as stored,
+        ):
             return {name: stored[name] for name in stored.files}
     except _BROKEN:
         return None

@@ -95,6 +95,7 @@ def emergent_spectra(
     n_angles: int = 6,
     lines: Mapping[str, LineList] | None = None,
     wing_cm: float = 25.0,
+    silent: Mapping[str, str] | None = None,
 ) -> dict[str, NDArray[np.float64]]:
     """Emergent fluxes of several mixtures on one structure; cross sections are computed once.
 
@@ -107,6 +108,8 @@ def emergent_spectra(
         label -> (molecule -> mole fraction).
     n_angles, lines, wing_cm
         As in `emergent_spectrum`.
+    silent : mapping, optional
+        label -> a molecule of that mixture that is present but does not absorb.
 
     Returns
     -------
@@ -120,7 +123,8 @@ def emergent_spectra(
     # an uneven last block of one sample cannot be a grid: share the samples evenly
     for block in np.array_split(np.arange(wavelength_um.size), -(-wavelength_um.size // _BLOCK)):
         part = slice(block[0], block[-1] + 1)
-        for label, flux in _block(wavelength_um[part], structure, mixtures, n_angles, lists, wing_cm).items():
+        fluxes = _block(wavelength_um[part], structure, mixtures, n_angles, lists, wing_cm, silent or {})
+        for label, flux in fluxes.items():
             out[label][part] = flux
     return out
 
@@ -155,6 +159,7 @@ def _block(
     n_angles: int,
     lists: Mapping[str, LineList | str],
     wing_cm: float,
+    silent: Mapping[str, str],
 ) -> dict[str, NDArray[np.float64]]:
     sigma = {
         molecule: _layer_cross_sections(source, 1e4 / wavelength, structure, wing_cm)
@@ -169,7 +174,7 @@ def _block(
         hydrogen = (1.0 - sum(mixture.values())) ** 2
         depth = collisions * (hydrogen * column * density)[:, None]
         for molecule, ratio in mixture.items():
-            if ratio > 0.0:
+            if ratio > 0.0 and silent.get(label) != molecule:
                 depth += (ratio * column)[:, None] * sigma[molecule]
         flux = np.empty(wavelength.size)
         emergent_flux(depth, source, mu, weight, flux)
