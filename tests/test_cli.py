@@ -232,28 +232,32 @@ def test_an_operating_system_error_is_the_users(small_run, capsys, monkeypatch):
 @pytest.mark.parametrize(("number", "code"), [(signal.SIGINT, 130), (signal.SIGTERM, 143)])
 def test_signals_in_a_process_of_its_own(small_run, number, code):
     program = (
-        "import sys, time\n"
+        "import signal, sys, time\n"
         "from xcorr import cli\n"
         "from xcorr.commands import run\n"
+        # a shell starts background jobs with SIGINT ignored, and the tests may be one
+        "signal.signal(signal.SIGINT, signal.default_int_handler)\n"
         "def wait(*_):\n"
         "    print('working', flush=True)\n"
         "    time.sleep(60)\n"
         "run._log_place = wait\n"
         "sys.exit(cli.main(['run', 'run.toml', '--out', 'd']))\n"
     )
-    environment = os.environ | {"PYTHONPATH": str(ROOT)}
-    process = subprocess.Popen(
+    with subprocess.Popen(
         [sys.executable, "-c", program],
         stdout=subprocess.PIPE,
         stderr=subprocess.PIPE,
         text=True,
         cwd=small_run,
-        env=environment,
-    )
-    assert process.stdout.readline() == "working\n"
-    assert [name for name in entries(small_run) if ".partial-" in name]
-    process.send_signal(number)
-    _, err = process.communicate(timeout=60)
+        env=os.environ | {"PYTHONPATH": str(ROOT)},
+    ) as process:
+        try:
+            assert process.stdout.readline() == "working\n"
+            assert [name for name in entries(small_run) if ".partial-" in name]
+            process.send_signal(number)
+            _, err = process.communicate(timeout=50)
+        finally:
+            process.kill()
     assert process.returncode == code
     assert err.startswith("xcorr: ")
     assert err.count("\n") == 1
