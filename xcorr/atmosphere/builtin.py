@@ -126,11 +126,12 @@ def builtin_template(
         "floor": floor,
         "layers": n_layers,
         "grid": GRID_RESOLUTION,
+        "form": form,
     }
     key = sha256_of_json([parameters, cache.code_digest(), _data_digests()])
     grid = wavelength_grid(low, high)
     _covered(name, grid)  # before any work is done
-    spectra = _spectra(key, low, high, t_eff, float(log_g), tuple(ratios.items()), floor, n_layers)
+    spectra = _spectra(key, low, high, t_eff, float(log_g), tuple(ratios.items()), floor, n_layers, form)
     flux, reference = _select(name, form, spectra)
     if name != FULL and np.max(np.abs(spectra[f"without {name}"] / reference - 1.0)) < _FEATURELESS:
         raise CoverageError(f"{name} has no features in the range", f"{low:g}-{high:g} um", "leave it out")
@@ -204,12 +205,13 @@ def _spectra(
     ratios: tuple[tuple[str, float], ...],
     floor: float,
     n_layers: int,
+    form: str,
 ) -> dict[str, NDArray[np.float64]]:
     """All spectra that the templates of one parameter set are made of, from the disk or computed."""
     stored = cache.load(key)
     if stored is not None:
         return stored
-    mixtures = _mixtures(dict(ratios), floor)
+    mixtures = _mixtures(dict(ratios), floor, form)
     structure = grey_structure(t_eff, log_g, n_layers=n_layers)
     silent = {f"without {molecule}": molecule for molecule in BUILTIN_MOLECULES}
     spectra = emergent_spectra(wavelength_grid(low, high), structure, mixtures, silent=silent)
@@ -217,8 +219,8 @@ def _spectra(
     return spectra
 
 
-def _mixtures(ratios: dict[str, float], floor: float) -> dict[str, dict[str, float]]:
-    """Label -> mixing ratios of the spectra needed for every template and form.
+def _mixtures(ratios: dict[str, float], floor: float, form: str) -> dict[str, dict[str, float]]:
+    """Label -> mixing ratios of the spectra needed for every template of one form.
 
     "without X" is the same gas with X transparent: a molecule without lines contributes exactly nothing.
     """
@@ -230,7 +232,8 @@ def _mixtures(ratios: dict[str, float], floor: float) -> dict[str, dict[str, flo
         others = {name: value for name, value in ratios.items() if name != molecule}
         mixtures[f"with {molecule}"] = others | {molecule: used}
         mixtures[f"without {molecule}"] = others | {molecule: used}
-        mixtures[f"only {molecule}"] = {molecule: used}
+        if form == "alone":
+            mixtures[f"only {molecule}"] = {molecule: used}
     return mixtures
 
 

@@ -168,8 +168,14 @@ def _block(
     collisions = _collision_coefficient(1e4 / wavelength, structure)
     source = np.stack([planck(wavelength, temperature) for temperature in structure.temperature_k])
     mu, weight = gauss_angles(n_angles)
-    out = {}
+    out: dict[str, NDArray[np.float64]] = {}
+    done: dict[tuple, NDArray[np.float64]] = {}
     for label, mixture in mixtures.items():
+        # equal mixtures are solved once: a molecule above its floor makes "with X" the full spectrum
+        same = (*sorted(mixture.items()), silent.get(label))
+        if same in done:
+            out[label] = done[same]
+            continue
         column, density = _layer_columns(structure, mixture, lists)
         hydrogen = (1.0 - sum(mixture.values())) ** 2
         depth = collisions * (hydrogen * column * density)[:, None]
@@ -178,7 +184,7 @@ def _block(
                 depth += (ratio * column)[:, None] * sigma[molecule]
         flux = np.empty(wavelength.size)
         emergent_flux(depth, source, mu, weight, flux)
-        out[label] = flux
+        out[label] = done[same] = flux
     return out
 
 
