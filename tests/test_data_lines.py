@@ -40,59 +40,69 @@ def spread(values: np.ndarray) -> float:
 
 
 def match_h2o(piece: dict[str, np.ndarray], faintest: float) -> tuple[np.ndarray, np.ndarray]:
-    """Rows (piece, list) of lines equal in isotopologue and lower energy (0.05 cm-1), nearest in 0.1 cm-1."""
+    """Rows (piece, list) of lines of H2(16)O nearest in position (0.01 cm-1) with the same lower energy.
+
+    The list's lower energies are calculated ones (Barber et al. 2006), within 0.2 cm-1 of measured ones.
+    """
     lines = load_lines("H2O")
     pairs = []
-    for i in np.flatnonzero(piece["s"] > faintest):
-        first, last = np.searchsorted(lines.wavenumber_per_cm, piece["nu"][i] + np.array([-0.1, 0.1]))
-        same = np.abs(lines.lower_energy_per_cm[first:last] - piece["e"][i]) < 0.05
-        same &= lines.isotopologue[first:last] == piece["iso"][i]
+    wanted = (piece["s"] > faintest) & (piece["iso"] == 1) & (piece["nu"] > lines.wavenumber_per_cm[0])
+    for i in np.flatnonzero(wanted):
+        first, last = np.searchsorted(lines.wavenumber_per_cm, piece["nu"][i] + np.array([-0.01, 0.01]))
+        same = np.abs(lines.lower_energy_per_cm[first:last] - piece["e"][i]) < 0.2
         if same.any():
             distance = np.where(same, np.abs(lines.wavenumber_per_cm[first:last] - piece["nu"][i]), np.inf)
             pairs.append((i, first + int(np.argmin(distance))))
+    assert len(pairs) >= 0.98 * np.count_nonzero(wanted)
     return tuple(np.array(pairs).T)
 
 
 @pytest.mark.parametrize("name", PIECES)
-def test_h2o_positions_and_strengths_against_newer_hitran(reference_data, name):
-    """HITRAN 2016/2020 pieces, lines above 1e-25: newer measurements than the shipped HITRAN 2012."""
+def test_h2o_positions_and_strengths_against_hitran(reference_data, name):
+    """HITRAN 2016/2020 pieces, lines above 1e-25. The table's 0.001 Angstrom is 0.006-0.01 km/s here."""
     piece = read_par(reference_data / "hitran" / name)
     theirs, ours = match_h2o(piece, 1e-25)
     lines = load_lines("H2O")
-    assert len(theirs) >= 0.99 * np.count_nonzero(piece["s"] > 1e-25)
     shift = (lines.wavenumber_per_cm[ours] / piece["nu"][theirs] - 1) * LIGHT_KM_S
-    assert abs(np.median(shift)) < 0.005
-    assert spread(shift) < 0.02
-    assert np.mean(np.abs(shift) < 0.02) > 0.85  # the rest was remeasured between the two editions
+    assert abs(np.median(shift)) < 0.001  # the air formula is the right one: Ciddor would leave 0.0016
+    assert np.mean(np.abs(shift) < 0.02) > 0.99
     ratio = np.log10(lines.strength_296[ours] / piece["s"][theirs])
-    assert abs(np.median(ratio)) < 0.02
-    assert spread(ratio) < 0.05
+    assert abs(np.median(ratio)) < 0.002
+    assert spread(ratio) < 0.005  # log gf has three decimals; lines of the wrong kind are off by 0.48
 
 
 @pytest.mark.parametrize("name", PIECES)
 def test_h2o_ortho_and_para(reference_data, name):
-    """Ortho levels have Ka + Kc + v3 odd: the list's flag against the labels of the newer pieces.
+    """Ortho levels have Ka + Kc + v3 odd: the list's flag, found from levels alone, against labels.
 
-    The flag comes from the list's own weights; the pieces' weights are no truth (many newer rows repeat 75).
-    What is not right here are twins, an ortho and a para line within 0.002 cm-1 in position and energy, that
-    `match_h2o` swaps.
+    Most of what is not right here are doublets, an ortho and a para line within 0.01 cm-1 in position and
+    energy, of which each has the other's place.
     """
     piece = read_par(reference_data / "hitran" / name)
     theirs, ours = match_h2o(piece, 1e-25)
-    symmetric = piece["iso"][theirs] <= 2  # the pieces hold 1 and 4; HDO has no such symmetry
-    theirs, ours = theirs[symmetric], ours[symmetric]
     odd = piece["ka_kc_v3"][theirs] % 2
-    assert np.mean(odd == load_lines("H2O").ortho[ours]) >= 0.97
+    right = odd == load_lines("H2O").ortho[ours]
+    assert np.mean(right) >= 0.97
     assert 0.4 < odd.mean() < 0.8  # both kinds are there
 
 
+def test_h2o_strength_is_hardly_touched_by_wrong_kinds(reference_data):
+    """3400-4100 cm-1: lines of the wrong kind carry less than 0.4 % of the strength."""
+    piece = read_par(reference_data / "hitran" / PIECES[1])
+    theirs, ours = match_h2o(piece, 1e-25)
+    wrong = piece["ka_kc_v3"][theirs] % 2 != load_lines("H2O").ortho[ours]
+    assert piece["s"][theirs][wrong].sum() < 0.004 * piece["s"][theirs].sum()
+
+
 def test_h2o_without_the_ortho_factor_would_fail(reference_data):
-    """Control: dividing the ortho lines by three, a flaw of one published copy, breaks it."""
+    """Control: the table as published, whose ortho lines are a factor 3 too weak."""
     piece = read_par(reference_data / "hitran" / PIECES[1])
     theirs, ours = match_h2o(piece, 1e-25)
     lines = load_lines("H2O")
-    flawed = lines.strength_296[ours] / np.where(lines.ortho[ours] == 1, 3, 1)
-    assert spread(np.log10(flawed / piece["s"][theirs])) > 0.05
+    ratio = lines.strength_296[ours] / piece["s"][theirs]
+    flawed = ratio / np.where(lines.ortho[ours] == 1, 3, 1)
+    assert np.mean(np.abs(np.log10(ratio)) < 0.05) > 0.95
+    assert np.mean(np.abs(np.log10(flawed)) < 0.05) < 0.6
 
 
 def read_co() -> dict[str, np.ndarray]:
@@ -233,11 +243,12 @@ def test_co_band_heads(isotopologue, v_up, head_um):
 
 
 def test_lists_are_read_only_sorted_and_documented():
-    for molecule, count in (("H2O", 142_754), ("CO", 34_594)):
+    for molecule, count in (("H2O", 84_432), ("CO", 34_594)):
         lines = load_lines(molecule)
         assert len(lines) == count
         assert np.all(np.diff(lines.wavenumber_per_cm) >= 0)
-        assert "2013" in lines.source
+        assert "HITRAN" in lines.source
+        assert lines.gamma_air is None
         with pytest.raises(ValueError, match="read-only"):
             lines.strength_296[0] = 1.0
     assert load_lines("H2O").complete_to_k == 1300
@@ -249,7 +260,7 @@ def test_select_cuts_every_column():
     assert part.wavenumber_per_cm[0] >= 4200
     assert part.wavenumber_per_cm[-1] <= 4300
     assert part.strength_296.min() >= 1e-26
-    assert len(part.ortho) == len(part.gamma_air) == len(part) > 100
+    assert len(part.ortho) == len(part.lower_energy_per_cm) == len(part) > 100
 
 
 def test_unknown_molecule_says_what_ships():

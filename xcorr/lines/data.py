@@ -50,9 +50,10 @@ class LineList:
     masses_u, abundances : ndarray (n_isotopologue,)
         Element ``n - 1`` belongs to isotopologue n. Masses in u.
     gamma_air, gamma_self, n_air : ndarray (n_line,) or None
-        Half widths at 296 K, cm-1 atm-1, and the temperature exponent of ``gamma_air``; None where unknown.
+        Half widths at 296 K, cm-1 atm-1, and the temperature exponent of ``gamma_air``; None where unknown,
+        as in the shipped lists.
     ortho : ndarray (n_line,) of int8, or None
-        1 ortho, 0 para, -1 no nuclear-spin symmetry.
+        1 ortho, 0 para, -1 unknown or no nuclear-spin symmetry.
     complete_to_k : float
         Above this temperature lines from hot levels are missing.
     source, notes, digest : str
@@ -123,7 +124,7 @@ class PartitionTable:
     partition_sum : ndarray (n_isotopologue, n_t)
         NaN above the isotopologue's own limit.
     agreed_to_k : ndarray (n_isotopologue,)
-        Temperature to which the last two releases of the source agree to 0.5 %.
+        Temperature to which the sums and the last two releases of TIPS agree to 0.5 %.
     """
 
     molecule: str
@@ -151,6 +152,7 @@ class CiaTable:
     ----------
     wavenumber_per_cm : ndarray (n_wave,)
     temperature_k : ndarray (n_t,)
+        Ascending; the lowest is 1000 K.
     coefficient : ndarray (n_t, n_wave)
         cm-1 amagat-2: times the two densities in amagat (once the square for H2-H2) gives cm-1.
     """
@@ -309,14 +311,17 @@ def load_partition(molecule: str) -> PartitionTable:
             partition_sum=file[molecule][()],
             isotopologue_names=_text(file.attrs[f"isotopologues_{molecule}"]),
             agreed_to_k=file.attrs[f"agreed_to_k_{molecule}"],
-            source=file.attrs["source"],
+            source=file.attrs[f"source_{molecule}"],
             digest=digest,
         )
 
 
 @cache
 def load_cia() -> MappingProxyType[str, CiaTable]:
-    """Collision-induced absorption, by pair: ``"H2-H2"`` and ``"H2-He"``."""
+    """Collision-induced absorption, by pair: ``"H2-H2"`` and ``"H2-He"``, from 1000 K.
+
+    No colder table ships. The 1000 K one stands in, too high by about a factor 3 at 300 K and 4100 cm-1.
+    """
     file, digest = _open("cia.h5")
     with file:
         tables = {
