@@ -143,7 +143,7 @@ def sampled_psf(images: NDArray, wavelength_um: NDArray) -> SampledPsf:
 def _windowed_centroid(image: NDArray) -> tuple[float, float]:
     """Centroid (x, y) under a Gaussian window of the source's own width that follows it.
 
-    A window fixed on the peak's pixel draws the centroid towards it, 0.12 pixels for a FWHM of 3.5 (measured).
+    A window fixed on the peak's pixel draws the centroid towards it, 0.12 pixels for a FWHM of 3.5 measured.
     The factor 2 is exact for a Gaussian under an equal Gaussian window (common practice, no source).
     """
     rows, columns = np.indices(image.shape)
