@@ -26,7 +26,9 @@ def test_structure_is_eddington_above_the_convection_zone(t_eff, log_g):
     ln_p, ln_t = np.log(built.pressure_bar), np.log(built.temperature_k)
     gradient = np.diff(ln_t) / np.diff(ln_p)
     # optical depth integrated anew from the result: kappa dP / g
-    opacity = rosseland_opacity(built.layer_temperature_k, built.layer_pressure_bar) + grain_opacity(t_eff)
+    opacity = rosseland_opacity(built.layer_temperature_k, built.layer_pressure_bar) + grain_opacity(
+        t_eff, log_g
+    )
     tau = np.concatenate([[0.0], np.cumsum(opacity * np.diff(built.pressure_bar) * 1e6 / 10.0**log_g)])
     radiative = np.concatenate([[True], gradient < 0.99 * ADIABATIC_GRADIENT])
     radiative &= np.cumsum(~radiative) == 0

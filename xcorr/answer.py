@@ -7,12 +7,14 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
+from scipy import stats
 
 from xcorr.engine import Sums, conditional_snr
 from xcorr.errors import CoverageError, Note
 from xcorr.results import MoleculeResult, NullSummary
 from xcorr.search import PositionSums
 from xcorr.significance import (
+    FAMILY_P,
     MIN_NULL_POSITIONS,
     Calibration,
     SearchVolume,
@@ -23,7 +25,6 @@ from xcorr.significance import (
     peak,
     velocity_curvature,
     verdict,
-    wider,
 )
 
 FAR_ELEMENTS = 2.0
@@ -101,10 +102,11 @@ class Curves:
     null_maxima: NDArray[np.float64]
     laws: tuple[Calibration, ...]
     conditional_laws: tuple[Calibration, ...]
+    far_excess: NDArray[np.float64]
 
 
 def fitted_signal(target: Sums, index: int) -> NDArray[np.float64]:
-    """Amplitudes of the joint fit at one velocity of the grid, (n_molecule,); 0 outside the first set of rivals."""
+    """Amplitudes (n_molecule,) of the joint fit at one velocity; 0 outside the first set of rivals."""
     members = list(target.rivals[0])
     amplitude, error = target.joint.subset(target.rivals[0]).joint()
     out = np.zeros(target.num.shape[1])
@@ -144,18 +146,29 @@ def _far_law(curve: NDArray, far: NDArray[np.bool_], correlation: NDArray) -> Ca
     return Calibration(law.mean, law.std, law.nu_eff, max(1, round(law.nu_eff + 1.0)), law.family)
 
 
-def _laws(
+def _law(
     null: NDArray | None, signal_free: NDArray, far: NDArray, correlation: NDArray, positions: NDArray
 ) -> Calibration:
-    """Positions where there are enough of them, widened by the far velocities if those scatter more."""
-    law = _far_law(signal_free, far, correlation)
+    """Null law of one statistic: companion-free positions, else far velocities, else the claimed errors.
+
+    Far velocities of the target see what the templates do not explain of a real companion, so they would let
+    a signal inflate its own null; where there are positions they only serve as a check (note null-families-differ).
+    """
     if null is not None and np.isfinite(null).all(axis=1).sum() >= MIN_NULL_POSITIONS:
-        own = calibrate(null, correlation, positions)
-        return own if law is None else wider(own, law)
+        return calibrate(null, correlation, positions)
+    law = _far_law(signal_free, far, correlation)
     if law is None:
         # no null at all: the claimed errors, trusted like three values
         return Calibration(0.0, 1.0, 3.0, 0, "claimed")
     return law
+
+
+def _excess(law: Calibration, far: Calibration | None) -> float:
+    """Spread at far velocities of the target over that of the positions where significantly wider, else 1."""
+    if far is None or law.family != "positions":
+        return 1.0
+    ratio = far.std / law.std
+    return ratio if stats.f.sf(ratio**2, max(far.nu_eff, 1.0), max(law.nu_eff, 1.0)) < FAMILY_P else 1.0
 
 
 def calibrated_curves(evidence: Evidence) -> Curves:
@@ -167,17 +180,16 @@ def calibrated_curves(evidence: Evidence) -> Curves:
     index = _strongest_index(raw, evidence.searched)
     far = _far(evidence, index)
     signal_free, signal_free_conditional = remove_signal(evidence, index)
-    laws, conditional_laws, maxima = [], [], []
+    laws, conditional_laws, maxima, excess = [], [], [], []
     for m in range(len(evidence.names)):
         correlation = evidence.correlation(m)
         own = None if null is None else null[:, m]
         own_conditional = None if null_conditional is None else null_conditional[:, m]
-        law = _laws(own, signal_free[m], far, correlation, evidence.position_correlation)
+        law = _law(own, signal_free[m], far, correlation, evidence.position_correlation)
         laws.append(law)
+        excess.append(_excess(law, _far_law(signal_free[m], far, correlation)))
         conditional_laws.append(
-            _laws(
-                own_conditional, signal_free_conditional[m], far, correlation, evidence.position_correlation
-            )
+            _law(own_conditional, signal_free_conditional[m], far, correlation, evidence.position_correlation)
         )
         if own is None:
             maxima.append(np.array([np.nanmax(law.snr(signal_free[m][far]))]) if far.any() else np.zeros(0))
@@ -199,6 +211,7 @@ def calibrated_curves(evidence: Evidence) -> Curves:
         null_maxima=padded,
         laws=tuple(laws),
         conditional_laws=tuple(conditional_laws),
+        far_excess=np.array(excess),
     )
 
 

@@ -161,8 +161,8 @@ def _search(exposures: Exposures, velocities: NDArray, maps: bool, report: Progr
         found.notes.append(
             Note(
                 "blind-search",
-                "no position was given: the strongest of the map is reported, the others are its null, and every "
-                "map position counts as a trial",
+                "no position was given: the strongest of the map is reported, the others are its null, and "
+                "every map position counts as a trial",
             )
         )
     for i in range(len(found.records), n):
@@ -200,7 +200,8 @@ def _add_map(found: _Search, exposures: Exposures, engine: ExposureEngine, i: in
 
 def _map_snr(found: _Search) -> NDArray[np.float32]:
     """Raw solo S/N of the map, (n_position, n_molecule, n_velocity)."""
-    assert found.map_num is not None and found.map_info is not None  # built just before: a bug otherwise
+    assert found.map_num is not None  # built just before
+    assert found.map_info is not None
     with np.errstate(invalid="ignore", divide="ignore"):
         return np.where(found.map_info > 0, found.map_num / np.sqrt(found.map_info), np.nan)
 
@@ -217,7 +218,8 @@ def _best_position(found: _Search) -> tuple[float, float]:
 def _place_nulls(found: _Search, first: ExposureEngine, exposures: Exposures) -> None:
     """Check the target's place and choose companion-free positions."""
     exposure = first.exposure
-    assert found.target_xy is not None and exposure.psf is not None  # a cube always has both here
+    assert found.target_xy is not None  # a cube always has both here
+    assert exposure.psf is not None
     describe_position(found.target_xy, exposure, first.stamps(np.array(found.target_xy)), found.notes)
     found.nulls_xy = ring_positions(
         exposure.shape,
@@ -396,13 +398,15 @@ def _null_notes(evidence: Evidence, curves: Curves) -> list[Note]:
                 "one spectrum has no companion-free positions: the null is its far velocities",
             )
         )
-    elif "far velocities" in families:
-        notes.append(
-            Note(
-                "null-families-differ",
-                "far velocities at the target scatter more than companion-free positions; the wider one is used",
+    for name, excess in zip(evidence.names, curves.far_excess, strict=True):
+        if excess > 1.0:
+            notes.append(
+                Note(
+                    "null-families-differ",
+                    f"{name}: far velocities at the target scatter {excess:.1f} times more than companion-free "
+                    "positions: template mismatch, or something else at that place",
+                )
             )
-        )
     if "claimed" in families:
         notes.append(
             Note("null-missing", "no null sample could be formed: significance rests on the claimed errors")

@@ -20,13 +20,14 @@ MIN_NULL_POSITIONS = 6
 SNR_CEILING_P = 1e-300
 """Probabilities below this are reported as this."""
 FAMILY_P = 0.01
-"""Two null families differ when an F-test says so at this level; the wider one is then used."""
+"""Two null families differ when an F-test says so at this level."""
 
 
 def student_t_threshold(false_positive: float, n_null: int) -> float:
     """Threshold, in standard deviations of `n_null` null values, of a given false-positive probability.
 
-    Mawet et al. 2014 (ApJ 792, 97), eq. 9: t quantile of n_null - 1 degrees of freedom times sqrt(1 + 1/n_null).
+    Mawet et al. 2014 (ApJ 792, 97), eq. 9: the t quantile of n_null - 1 degrees of freedom times
+    sqrt(1 + 1/n_null).
 
     Parameters
     ----------
@@ -49,7 +50,9 @@ def global_p(p_local: float, n_trials: float) -> float:
 
 
 def davies_p(level: float, span: float, curvature: float) -> float:
-    """Bound on P(max over a span > level) of a unit Gaussian process (Davies 1977, Biometrika 64, 247, eq. 3.7).
+    """Bound on P(max over a span > level) of a unit Gaussian process.
+
+    Davies 1977 (Biometrika 64, 247), eq. 3.7, from the expected upcrossings of Rice 1945.
 
     Parameters
     ----------
@@ -168,14 +171,6 @@ def held_out(null: NDArray, velocity_correlation: NDArray, position_correlation:
         law = calibrate(null[others], velocity_correlation, position_correlation[np.ix_(others, others)])
         out[i] = law.snr(null[i])
     return out
-
-
-def wider(first: Calibration, second: Calibration) -> Calibration:
-    """The first law, or, where the second family scatters significantly more, the first with that spread."""
-    ratio = (second.std / first.std) ** 2
-    if stats.f.sf(ratio, max(second.nu_eff, 1.0), max(first.nu_eff, 1.0)) < FAMILY_P:
-        return Calibration(first.mean, second.std, second.nu_eff, first.n_null, second.family)
-    return first
 
 
 @dataclass(frozen=True)

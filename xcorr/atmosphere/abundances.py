@@ -10,10 +10,11 @@ from xcorr.atmosphere.structure import grey_structure
 
 MOLECULE_FLOOR = 1e-5
 QUENCH_FACTOR = 1.25
+QUENCH_TEMPERATURE_K = 1600.0
 
 
 def default_mixing_ratios(t_eff: float, log_g: float) -> dict[str, float]:
-    """Equilibrium of solar-composition gas at the level where T = 1.25 T_eff, for the built-in molecules.
+    """Equilibrium of solar-composition gas where T = max(1.25 T_eff, 1600 K), for the built-in molecules.
 
     Parameters
     ----------
@@ -29,12 +30,12 @@ def default_mixing_ratios(t_eff: float, log_g: float) -> dict[str, float]:
 
     Notes
     -----
-    Vertical mixing freezes CO/CH4 somewhat below the photosphere; that it does is common practice, the
-    factor 1.25 is a choice without a source. The level comes from the grey structure, so the ratios depend
-    on its opacity: CO/CH4 by the square of the pressure.
+    Vertical mixing freezes CO/CH4 below the photosphere, where the reaction becomes slower than the mixing;
+    that it does is common practice, the factor 1.25 and the 1600 K are choices without a source. The level
+    comes from the grey structure, so the ratios depend on its opacity: CO/CH4 by the square of the pressure.
     """
     structure = grey_structure(t_eff, log_g)
-    level = QUENCH_FACTOR * t_eff
+    level = min(max(QUENCH_FACTOR * t_eff, QUENCH_TEMPERATURE_K), float(structure.temperature_k[-1]))
     pressure = np.exp(np.interp(level, structure.temperature_k, np.log(structure.pressure_bar)))
     gases = equilibrium(level, pressure).as_dict()
     return {name: gases[name] for name in BUILTIN_MOLECULES}

@@ -86,16 +86,21 @@ def rosseland_opacity(temperature_k: NDArray | float, pressure_bar: NDArray | fl
     return 10.0**low + 10.0**high
 
 
-def grain_opacity(t_eff: float) -> float:
-    """Grey opacity of condensates, cm2 / g: none up to 1200 K, 0.05 from 1500 K, linear between.
+def grain_opacity(t_eff: float, log_g: float) -> float:
+    """Grey opacity of condensates, cm2 / g: at log g 5 none up to 1200 K, 0.05 from 1500 K, linear between.
+
+    Both temperatures fall by 400 K per decade of gravity.
 
     Notes
     -----
-    That clouds lie in the photospheres of L dwarfs and below those of T dwarfs is common practice, no source;
-    the value puts the photosphere of a 1600 K, log g 5 atmosphere near 1 bar instead of 5, where equilibrium
-    would leave enough methane to dominate the K band, against what L dwarfs show.
+    That clouds lie in the photospheres of L dwarfs and below those of T dwarfs, and leave them at lower
+    effective temperatures where gravity is low, is common practice (Marley et al. 2012, ApJ 754, 135, for the
+    gravity). The numbers have no source: the value puts the photosphere of a 1600 K, log g 5 atmosphere near
+    1 bar instead of 5, where equilibrium would leave enough methane to dominate the K band, against what L
+    dwarfs show; the slope keeps young objects of 1000-1400 K cloudy, and so poor in methane.
     """
-    return float(np.interp(t_eff, (1200.0, 1500.0), (0.0, 0.05)))
+    shift = 400.0 * (5.0 - log_g)
+    return float(np.interp(t_eff + shift, (1200.0, 1500.0), (0.0, 0.05)))
 
 
 def default_pressures(log_g: float) -> tuple[float, float]:
@@ -143,7 +148,7 @@ def grey_structure(
     layers are cooler than 0.84 T_eff, and strong lines deeper.
     """
     top, bottom = _check_structure(t_eff, log_g, n_layers, pressures_bar)
-    grains = grain_opacity(t_eff) if grains_cm2_g is None else grains_cm2_g
+    grains = grain_opacity(t_eff, log_g) if grains_cm2_g is None else grains_cm2_g
     log_pressure = np.linspace(np.log(top), np.log(bottom), _FINE + 1)
     step = log_pressure[1] - log_pressure[0]
     # dtau / dlnP per unit of opacity, and the Eddington gradient's constants
