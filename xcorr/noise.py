@@ -14,6 +14,8 @@ from numpy.typing import NDArray
 from scipy.ndimage import generic_filter1d, uniform_filter1d
 
 MAD_TO_SIGMA = 1.4826
+MEDIAN_OF_CHI2 = 0.454936
+"""Of one degree of freedom."""
 OUTLIER_SIGMA = 6.0
 MIN_SPAXELS = 30
 """Fewer spaxels than this cannot support a regression over the field."""
@@ -104,8 +106,8 @@ def scatter_variance(
     squares = residual.astype(np.float32) ** 2
     if len(residual) >= MIN_SPAXELS:
         clipped = np.minimum(squares, 9.0 * _row_scale(residual, usable)[:, None] ** 2).astype(np.float32)
-        # 9 sigma^2 clipping of a chi-square variable lowers its mean by 2.7 %
-        return model_variance((clipped / 0.973).astype(np.float32), usable, model)
+        # the law is scaled by medians, and the median of a chi-square variable is 0.455 of its mean
+        return model_variance((clipped / MEDIAN_OF_CHI2).astype(np.float32), usable, model)
     return np.stack([running_variance(row, ok) for row, ok in zip(residual, usable, strict=True)])
 
 
