@@ -47,7 +47,8 @@ def test_model_variance_loses_the_noise_of_the_single_sample():
     # the correlation with the noise itself is what biases a null
     noise = (data - model) / np.sqrt(variance)
     assert abs(np.corrcoef(noise.ravel(), (claimed / variance).ravel())[0, 1]) > 0.8  # control
-    assert abs(np.corrcoef(noise.ravel(), (found / variance).ravel())[0, 1]) < 0.1
+    # a sample is one of 144 in its channel: sqrt(2 / 144)
+    assert abs(np.corrcoef(noise.ravel(), (found / variance).ravel())[0, 1]) < 0.15
 
 
 def null_of_amplitudes(weights_of, seed, template):
