@@ -272,7 +272,9 @@ def _gram(channel: Channel, stamps: Stamps) -> NDArray[np.float64]:
     if len(templates.continuum):
         cross = full[:n_column, n_column:]
         inner = full[n_column:, n_column:].copy()
-        inner[np.diag_indices_from(inner)] *= 1.0 + CONTINUUM_RIDGE
+        energy = np.diagonal(inner).copy()
+        # a column without information here, or no usable spaxel at all, takes nothing
+        inner[np.diag_indices_from(inner)] = np.where(energy > 0, energy * (1.0 + CONTINUUM_RIDGE), 1.0)
         kept = kept - cross @ np.linalg.solve(inner, cross.T)
     return kept
 

@@ -354,8 +354,9 @@ def _subtract_corrections(
     share = (stamps.profiles.astype(np.float64) ** 2).mean(axis=2)
 
     def over_stamps(table: NDArray[np.float32]) -> NDArray[np.float64]:
-        out = np.empty((len(share), table[0].size))
-        weighted_gather(stamps.spaxels, share, table.reshape(len(table), -1), out)
+        size = int(np.prod(table.shape[1:]))
+        out = np.empty((len(share), size))
+        weighted_gather(stamps.spaxels, share, table.reshape(len(table), size), out)
         return out.reshape(len(share), *table.shape[1:])
 
     info -= over_stamps(taken.molecules) @ taken.interpolation
