@@ -530,9 +530,10 @@ def _throughput(
         )
     slope = planck_shape(cube.wavelength_um, t_eff)
     continuum = telluric.continuum if telluric is not None else _smooth_continuum(cube, star)
+    continuum = continuum * _line_blanketing(star, telluric, continuum)
     if star_image is None:
         return star.scale * continuum / slope, False
-    # the star's PSF-integrated flux follows the reference up to a straight line in wavelength
+    # the star's PSF-integrated flux follows the reference up to a cubic in wavelength
     known = star.known
     ascending = np.argsort(cube.wavelength_um)
     bins = np.array_split(ascending, star_image.wavelength_um.size)
@@ -541,8 +542,17 @@ def _throughput(
     fine = np.isfinite(ratio) & (ratio > 0)
     if fine.sum() < 2:
         return star.scale * continuum / slope, False
-    line = np.polyfit(star_image.wavelength_um[fine], ratio[fine], 1 if fine.sum() > 2 else 0)
+    line = np.polyfit(star_image.wavelength_um[fine], ratio[fine], min(3, int(fine.sum()) - 2))
     return np.polyval(line, cube.wavelength_um) * continuum / slope, True
+
+
+def _line_blanketing(star: StarSpectrum, telluric: TelluricFit | None, continuum: NDArray) -> float:
+    """Mean of the star outside the atmosphere over that of its continuum: amplitudes count the star with its lines."""
+    clear = star.known if telluric is None else star.known & (telluric.transmission_channels > 0.3)
+    if not clear.any():
+        return 1.0
+    outside = star.flux if telluric is None else star.flux / np.maximum(telluric.transmission_channels, 0.3)
+    return float(outside[clear].mean() / continuum[clear].mean())
 
 
 def _smooth_continuum(cube: Cube, star: StarSpectrum) -> NDArray[np.float64]:

@@ -303,7 +303,7 @@ def _fit_moffat(
     width: float,
     fixed: dict[str, float] | None = None,
 ) -> dict[str, float]:
-    """Fit amplitude, background, centre and widths (and exponent and angle unless fixed)."""
+    """Fit amplitude, centre and widths (and exponent and angle unless fixed)."""
     near = _around(image, centre, excluded, max(2.2 * width, 2.6))
     rows, columns = np.nonzero(near)
     values = image[near]
@@ -312,13 +312,14 @@ def _fit_moffat(
     sigma = np.sqrt(np.clip(values, 0.0, None) / peak + 0.01)
 
     def model(p: NDArray) -> NDArray:
-        beta, angle = (fixed["beta"], fixed["angle"]) if fixed else (1.0 + np.exp(p[6]), p[7])
+        beta, angle = (fixed["beta"], fixed["angle"]) if fixed else (1.0 + np.exp(p[5]), p[6])
         shape = moffat(columns - p[0], rows - p[1], np.exp(p[2]), np.exp(p[3]), angle, beta)
-        return peak * (p[4] * shape * np.exp(p[2] + p[3]) + p[5])
+        return peak * p[4] * shape * np.exp(p[2] + p[3])
 
-    start = [*centre, np.log(width), np.log(width), 1.0, 0.0]
-    lower = [centre[0] - 2, centre[1] - 2, np.log(0.6), np.log(0.6), 0.0, -0.5]
-    upper = [centre[0] + 2, centre[1] + 2, np.log(30.0), np.log(30.0), 10.0, 0.5]
+    # no background term: the pedestal under the core is the PSF's own halo, which the companion has too
+    start = [*centre, np.log(width), np.log(width), 1.0]
+    lower = [centre[0] - 2, centre[1] - 2, np.log(0.6), np.log(0.6), 0.0]
+    upper = [centre[0] + 2, centre[1] + 2, np.log(30.0), np.log(30.0), 10.0]
     if fixed is None:
         start, lower, upper = (
             [*start, np.log(2.0), 0.1],
@@ -338,25 +339,26 @@ def _fit_moffat(
         "y": float(p[1]),
         "fwhm_x": float(np.exp(p[2])),
         "fwhm_y": float(np.exp(p[3])),
-        "beta": fixed["beta"] if fixed else float(1.0 + np.exp(p[6])),
-        "angle": fixed["angle"] if fixed else float(p[7]),
+        "beta": fixed["beta"] if fixed else float(1.0 + np.exp(p[5])),
+        "angle": fixed["angle"] if fixed else float(p[6]),
     }
 
 
 def _star_flux(
     images: NDArray, psf: MoffatPsf, star_xy: tuple[float, float], excluded: NDArray
 ) -> tuple[NDArray[np.float64], float]:
-    """Star flux per node by fitting the final profile and a constant; and the relative misfit."""
+    """Star flux per node, and the relative misfit.
+
+    The same estimate as the companion's amplitude (uniform weights on the same stamp), so that an imperfect
+    profile cancels in their ratio.
+    """
     rows, columns = np.indices(images.shape[1:])
     profiles = psf.profile(columns - star_xy[0], rows - star_xy[1])
     flux, misfit = np.empty(len(images)), []
     for n, (image, profile) in enumerate(zip(images, profiles, strict=True)):
-        near = _around(image, star_xy, excluded, max(2.2 * psf.fwhm_pixels, 2.6))
-        sigma = np.sqrt(profile[near] / profile[near].max() + 0.01)
-        matrix = np.stack([profile[near], np.ones(near.sum())], axis=1)
-        solution, *_ = np.linalg.lstsq(matrix / sigma[:, None], image[near] / sigma, rcond=None)
-        flux[n] = solution[0]
-        misfit.append(np.std(image[near] - matrix @ solution) / np.max(image[near]))
+        near = _around(image, star_xy, excluded, max(_stamp_radius(psf), 2.3))
+        flux[n] = np.sum(profile[near] * image[near]) / np.sum(profile[near] ** 2)
+        misfit.append(np.std(image[near] - flux[n] * profile[near]) / np.max(image[near]))
     return flux, float(np.mean(misfit))
 
 
