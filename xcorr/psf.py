@@ -20,6 +20,11 @@ from xcorr.errors import InputError
 N_NODE = 8
 DEFAULT_BETA = 4.765
 """Moffat exponent of a turbulence-limited image (Trujillo et al. 2001, MNRAS 328, 977)."""
+MAX_WING = 0.9
+WING_BETA = 2.5
+"""Exponent of the wing, close to that of a long-exposure seeing halo (common practice, no source)."""
+_PIXEL_POINTS = (-0.5 * np.sqrt(0.6), 0.0, 0.5 * np.sqrt(0.6))
+_PIXEL_WEIGHTS = (5.0 / 18.0, 8.0 / 18.0, 5.0 / 18.0)
 STAMP_RADIUS_FWHM = 1.25
 """Truncation: a Gaussian PSF keeps 0.9999 of the sum of squares inside 1.25 FWHM."""
 
@@ -41,19 +46,23 @@ class Psf(Protocol):
 
 @dataclass(frozen=True)
 class MoffatPsf:
-    """Elliptical Moffat profile whose width and position change with wavelength.
+    """Elliptical core and wing, both Moffat profiles integrated over pixels, changing with wavelength.
 
     Attributes
     ----------
     wavelength_um : array (n_node,)
     fwhm_x, fwhm_y : arrays (n_node,)
-        FWHM in pixels along the axes turned by `angle`.
+        FWHM of the core in pixels along the axes turned by `angle`.
     angle : float
         Radians from x to y.
     beta : float
-        Exponent, > 1.
+        Exponent of the core, > 1.
     drift_xy : array (n_node, 2)
         Position minus its mean, pixels.
+    wing_share : array (n_node,) or None
+        Share of the flux in the wing; None: no wing.
+    wing_ratio : float
+        FWHM of the wing over that of the core.
     """
 
     wavelength_um: NDArray[np.float64]
@@ -62,22 +71,55 @@ class MoffatPsf:
     angle: float
     beta: float
     drift_xy: NDArray[np.float64]
+    wing_share: NDArray[np.float64] | None = None
+    wing_ratio: float = 3.0
 
     @property
     def fwhm_pixels(self) -> float:
-        """Geometric mean FWHM at the middle node."""
+        """Geometric mean FWHM over the nodes, the pixel not included."""
         return float(np.sqrt(np.mean(self.fwhm_x) * np.mean(self.fwhm_y)))
 
     def profile(self, dx: NDArray, dy: NDArray) -> NDArray[np.float64]:
         """Flux per spaxel, (n_node, *dx.shape)."""
         shape = (-1,) + (1,) * np.ndim(dx)
-        x = dx[None] - self.drift_xy[:, 0].reshape(shape)
-        y = dy[None] - self.drift_xy[:, 1].reshape(shape)
-        return moffat(x, y, self.fwhm_x.reshape(shape), self.fwhm_y.reshape(shape), self.angle, self.beta)
+        share = np.zeros(self.wavelength_um.size) if self.wing_share is None else self.wing_share
+        return core_and_wing(
+            dx[None] - self.drift_xy[:, 0].reshape(shape),
+            dy[None] - self.drift_xy[:, 1].reshape(shape),
+            self.fwhm_x.reshape(shape),
+            self.fwhm_y.reshape(shape),
+            self.angle,
+            self.beta,
+            share.reshape(shape),
+            self.wing_ratio,
+        )
+
+
+def core_and_wing(
+    x: NDArray,
+    y: NDArray,
+    fwhm_x: NDArray | float,
+    fwhm_y: NDArray | float,
+    angle: float,
+    beta: float,
+    wing_share: NDArray | float,
+    wing_ratio: float,
+) -> NDArray[np.float64]:
+    """Two Moffat profiles of total flux one, integrated over pixels by 3 x 3 Gauss-Legendre points."""
+    total = np.zeros(np.broadcast(x, y, fwhm_x).shape)
+    for step_x, weight_x in zip(_PIXEL_POINTS, _PIXEL_WEIGHTS, strict=True):
+        for step_y, weight_y in zip(_PIXEL_POINTS, _PIXEL_WEIGHTS, strict=True):
+            core = moffat(x + step_x, y + step_y, fwhm_x, fwhm_y, angle, beta)
+            wing = 0.0
+            if np.any(wing_share):
+                wide_x, wide_y = fwhm_x * wing_ratio, fwhm_y * wing_ratio
+                wing = moffat(x + step_x, y + step_y, wide_x, wide_y, angle, WING_BETA)
+            total += weight_x * weight_y * ((1.0 - wing_share) * core + wing_share * wing)
+    return total
 
 
 def moffat(
-    x: NDArray, y: NDArray, fwhm_x: NDArray, fwhm_y: NDArray, angle: float, beta: float
+    x: NDArray, y: NDArray, fwhm_x: NDArray | float, fwhm_y: NDArray | float, angle: float, beta: float
 ) -> NDArray[np.float64]:
     """Moffat (1969, A&A 3, 455) profile of unit flux over the plane."""
     half = 2.0 * np.sqrt(2.0 ** (1.0 / beta) - 1.0)
@@ -266,6 +308,8 @@ def fit_star_image(
         angle=shape["angle"],
         beta=shape["beta"],
         drift_xy=np.stack([x - x.mean(), y - y.mean()], axis=1),
+        wing_share=np.clip(_smooth([one["wing"] for one in single], wavelength_um), 0.0, MAX_WING),
+        wing_ratio=shape["ratio"],
     )
     star_xy = (float(x.mean()), float(y.mean()))
     flux, residual = _star_flux(images, psf, star_xy, excluded)
@@ -303,7 +347,10 @@ def _fit_moffat(
     width: float,
     fixed: dict[str, float] | None = None,
 ) -> dict[str, float]:
-    """Fit amplitude, centre and widths (and exponent and angle unless fixed)."""
+    """Fit amplitude, centre, widths and wing share (exponent, angle and wing ratio too unless fixed).
+
+    There is no background term: the pedestal under the core is the PSF's own halo, which the companion has too.
+    """
     near = _around(image, centre, excluded, max(2.2 * width, 2.6))
     rows, columns = np.nonzero(near)
     values = image[near]
@@ -312,20 +359,20 @@ def _fit_moffat(
     sigma = np.sqrt(np.clip(values, 0.0, None) / peak + 0.01)
 
     def model(p: NDArray) -> NDArray:
-        beta, angle = (fixed["beta"], fixed["angle"]) if fixed else (1.0 + np.exp(p[5]), p[6])
-        shape = moffat(columns - p[0], rows - p[1], np.exp(p[2]), np.exp(p[3]), angle, beta)
-        return peak * p[4] * shape * np.exp(p[2] + p[3])
-
-    # no background term: the pedestal under the core is the PSF's own halo, which the companion has too
-    start = [*centre, np.log(width), np.log(width), 1.0]
-    lower = [centre[0] - 2, centre[1] - 2, np.log(0.6), np.log(0.6), 0.0]
-    upper = [centre[0] + 2, centre[1] + 2, np.log(30.0), np.log(30.0), 10.0]
-    if fixed is None:
-        start, lower, upper = (
-            [*start, np.log(2.0), 0.1],
-            [*lower, np.log(0.3), -3.2],
-            [*upper, np.log(15.0), 3.2],
+        beta, angle, ratio = (
+            (fixed["beta"], fixed["angle"], fixed["ratio"]) if fixed else (1.0 + np.exp(p[6]), p[7], p[8])
         )
+        fwhm_x, fwhm_y = np.exp(p[2]), np.exp(p[3])
+        shape = core_and_wing(columns - p[0], rows - p[1], fwhm_x, fwhm_y, angle, beta, p[5], ratio)
+        return peak * p[4] * shape * fwhm_x * fwhm_y
+
+    start = [*centre, np.log(width), np.log(width), 1.0, 0.2 if fixed is None else fixed["wing"]]
+    lower = [centre[0] - 2, centre[1] - 2, np.log(0.4), np.log(0.4), 0.0, 0.0]
+    upper = [centre[0] + 2, centre[1] + 2, np.log(30.0), np.log(30.0), 30.0, MAX_WING]
+    if fixed is None:
+        start, lower = [*start, np.log(3.0), 0.1, 3.0], [*lower, np.log(0.5), -3.2, 2.0]
+        upper = [*upper, np.log(30.0), 3.2, 8.0]
+    start = list(np.clip(start, np.add(lower, 1e-6), np.subtract(upper, 1e-6)))
     fit = least_squares(
         lambda p: (model(p) - values) / peak / sigma,
         start,
@@ -339,8 +386,10 @@ def _fit_moffat(
         "y": float(p[1]),
         "fwhm_x": float(np.exp(p[2])),
         "fwhm_y": float(np.exp(p[3])),
-        "beta": fixed["beta"] if fixed else float(1.0 + np.exp(p[5])),
-        "angle": fixed["angle"] if fixed else float(p[6]),
+        "wing": float(p[5]),
+        "beta": fixed["beta"] if fixed else float(1.0 + np.exp(p[6])),
+        "angle": fixed["angle"] if fixed else float(p[7]),
+        "ratio": fixed["ratio"] if fixed else float(p[8]),
     }
 
 
