@@ -17,6 +17,7 @@ from xcorr.noise import (
     OUTLIER_SIGMA,
     NoiseAudit,
     audit,
+    excess_scatter,
     flag_outliers,
     model_variance,
     running_variance,
@@ -206,6 +207,7 @@ def prepare(cube: Cube, scenery: Scenery, settings: StarlightSettings) -> Prepar
     good = np.array(usable.reshape(n_wave, -1).T, order="C")
     claimed = None if cube.variance is None else np.array(cube.variance.reshape(n_wave, -1).T, order="C")
     weights = _first_weights(spectra, good, claimed)
+    del good
     star = _star(cube, settings, spectra, weights, white, share, scenery, psf, no_star)
     weights[:, ~star.known] = 0.0
     nuisance = nuisance_model(
@@ -216,10 +218,15 @@ def prepare(cube: Cube, scenery: Scenery, settings: StarlightSettings) -> Prepar
         background_knots=settings.background_knots,
     )
     weights = _model_weights(spectra, weights, claimed, nuisance)
+    del claimed
     fit = fit_spaxels(spectra, weights, nuisance, in_place=True)
+    if len(weights) >= MIN_SPAXELS:
+        in_channel, in_spaxel = excess_scatter(fit.residual, weights)
+        weights /= in_channel**2
+        weights /= in_spaxel[:, None] ** 2
     outlier, scale = flag_outliers(fit.residual, weights)
     flagged = float(outlier.sum()) / max(1, int((weights > 0).sum()))
-    if not cube.is_spectrum and flagged:
+    if not cube.is_spectrum:
         weights[outlier] = 0.0
         fit = fit_spaxels(fit.residual, weights, nuisance, in_place=True)
     audited = audit(fit.residual, weights, (ny, nx), scale, 0.0 if cube.is_spectrum else flagged)
@@ -397,12 +404,20 @@ def _model_weights(
     if claimed is not None and len(spectra) < MIN_SPAXELS:
         return weights
     residual = fit_spaxels(spectra, weights, nuisance).residual
-    model = np.where(good, spectra - residual, np.float32(0.0))
+    bad = ~good
     if claimed is None:
+        model = spectra - residual
+        model[bad] = 0.0
         variance = scatter_variance(residual, good, model)
     else:
+        # planes are reused here and below: this is where the memory peaks
+        model = np.subtract(spectra, residual, out=residual)
+        model[bad] = 0.0
         variance = model_variance(claimed, good, model)
-    return np.where(good, 1.0 / np.maximum(variance, np.float32(1e-30)), np.float32(0.0))
+    np.maximum(variance, np.float32(1e-30), out=variance)
+    np.divide(np.float32(1.0), variance, out=variance)
+    variance[bad] = 0.0
+    return variance
 
 
 def _audit_notes(audited: NoiseAudit, cube: Cube) -> list[Note]:
