@@ -321,10 +321,7 @@ def _star_and_psf(
             )
         return None, fallback, scenery.star_xy
     guess_fwhm = fallback.fwhm_pixels if fallback is not None else DEFAULT_FWHM_PIXELS
-    excluded = excluded_spaxels((ny, nx), scenery, guess_fwhm)
-    star_xy = scenery.star_xy
-    if star_xy is None:
-        star_xy = find_peak(np.where(excluded, np.nan, white))
+    star_xy, excluded = _find_star(white, scenery, guess_fwhm)
     inside = -0.5 <= star_xy[0] <= nx - 0.5 and -0.5 <= star_xy[1] <= ny - 0.5
     if not inside and fallback is None:
         raise InputError(
@@ -346,6 +343,25 @@ def _star_and_psf(
     if fallback is not None:
         return image, fallback, image.star_xy
     return image, image.psf, image.star_xy
+
+
+def _find_star(
+    white: NDArray, scenery: Scenery, fwhm: float
+) -> tuple[tuple[float, float], NDArray[np.bool_]]:
+    """Position (x, y) of the star and the spaxels (ny, nx) to leave out of its image.
+
+    A companion in the star's core must not hide the star, and one brighter than a masked star must not pose as it.
+    """
+    excluded = excluded_spaxels(white.shape, scenery, fwhm)
+    others = excluded_spaxels(white.shape, replace(scenery, companion_xy=None), fwhm)
+    star_xy, companion = scenery.star_xy, scenery.companion_xy
+    if star_xy is None:
+        star_xy = find_peak(np.where(others, np.nan, white))
+        if companion is not None and np.hypot(*np.subtract(star_xy, companion)) < 1.0:
+            star_xy = find_peak(np.where(excluded, np.nan, white))
+    if companion is not None and np.hypot(*np.subtract(star_xy, companion)) < EXCLUSION_FWHM * fwhm:
+        excluded = others
+    return star_xy, excluded
 
 
 def _first_weights(
