@@ -10,7 +10,6 @@ from xcorr.engine import ExposureEngine, add
 from xcorr.exposure import Scenery, StarlightSettings, prepare, template_columns
 from xcorr.kernels import reference
 from xcorr.kernels.threads import limited_threads
-from xcorr.psf import moffat_of_width
 
 VELOCITY = np.arange(-600.0, 601.0, 20.0)
 AT = (0, 31, 32, 35)  # on and between the nodes of the splined correction; the companion is at 40 km/s
@@ -165,25 +164,26 @@ def test_coverage_groups_are_kept_apart(cool):
 # ---------------------------------------------------------------- what must not respond
 
 
-@pytest.fixture(scope="module")
-def featureless():
-    return noiseless(scene("flat", star="M", draw=COMPANION))
-
-
-def response(featureless, companion_knots):
+def response(companion_knots):
+    """What a featureless companion adds to the S/N: the same noise with and without it, largest of any velocity."""
     one = scene("flat", star="M", draw=COMPANION)
-    engine = engine_of(exposure_of(one, featureless, companion_knots=companion_knots))
-    return np.abs(engine.sums(companion_of(one)).snr()[0]).max(axis=1)
+    cube = cubes(one)[0]
+    without = cube.with_changes(data=np.where(cube.mask, 0, cube.data - one.exposures[0].companion))
+    snr = [
+        engine_of(exposure_of(one, own, companion_knots=companion_knots)).sums(companion_of(one)).snr()[0]
+        for own in (cube, without)
+    ]
+    return np.abs(snr[0] - snr[1]).max(axis=1)
 
 
-def test_a_featureless_companion_gives_no_response(featureless):
-    """Noiseless, at a contrast where a companion with lines has a S/N of 33: nothing is left, any velocity."""
-    assert np.all(response(featureless, 6) < 0.2)
+def test_a_featureless_companion_gives_no_response():
+    """At a contrast where a companion with lines has a S/N of 33. Weights differ a little: 0.1 of 3 sigma."""
+    assert np.all(response(6) < 0.3)
 
 
-def test_without_continuum_columns_it_does(featureless):
-    """Control: a featureless companion hides the star's lines, which the templates are not orthogonal to."""
-    found = response(featureless, 0)
+def test_without_continuum_columns_it_does():
+    """Control: a featureless companion fills the star's lines, which the templates are not orthogonal to."""
+    found = response(0)
     assert found[0] > 5
     assert found[1] > 2
 
@@ -279,13 +279,10 @@ def test_extracted_residual_spectrum(engine, cool):
 
 
 def test_nothing_usable_is_nan(cool):
-    cube = cubes(cool)[0]
-    mask = cube.mask.copy()
-    mask[:, :9, 7:] = True
-    here = companion_of(cool)
-    places = Scenery(tuple(here[0]), (7.8, 7.1), psf=moffat_of_width(2.4, cube.wavelength_um))
-    engine = engine_of(prepare(cube.with_changes(mask=mask), places, StarlightSettings()))
-    assert "psf-given" in {note.code for note in engine.exposure.notes}
+    cube, here = cubes(cool)[0], companion_of(cool)
+    rows, columns = np.indices(cube.shape[1:])
+    mask = cube.mask | (np.hypot(columns - here[0, 0], rows - here[0, 1]) < 4.2)
+    engine = engine_of(exposure_of(cool, cube.with_changes(mask=mask)))
     sums = engine.sums(here)
     assert np.all(np.isnan(sums.snr()))
     assert np.all(np.isnan(sums.conditional()))

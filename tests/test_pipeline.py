@@ -266,11 +266,11 @@ def test_star_outside_the_field_with_a_given_width():
 
 
 def test_no_usable_spaxel_under_the_companion(bright):
-    cube = cubes(bright)[0]
-    mask = cube.mask.copy()
-    mask[:, :9, 7:] = True
+    cube, (x, y) = cubes(bright)[0], bright.exposures[0].companion_xy.mean(axis=0)
+    rows, columns = np.indices(cube.shape[1:])
+    mask = cube.mask | (np.hypot(columns - x, rows - y) < 4.2)
     with pytest.raises(SettingsError, match="no usable spaxel under the companion"):
-        search(bright, data=[cube.with_changes(mask=mask)], extra="[psf]\nfwhm_pixels = 2.4\n")
+        search(bright, data=[cube.with_changes(mask=mask)])
 
 
 # ---------------------------------------------------------------- errors of the data
