@@ -44,6 +44,8 @@ DEFAULT_STAR_T_EFF = 6000.0
 FINE_GRID_R = 250_000.0
 EXCLUSION_FWHM = 1.5
 SCATTER_CHANNELS = 101
+COMMON_SPREAD = 1.3
+"""Scatter of sums over the field, in units of independent errors, from which a common residual is fitted."""
 
 
 @dataclass(frozen=True)
@@ -218,6 +220,9 @@ def prepare(cube: Cube, scenery: Scenery, settings: StarlightSettings) -> Prepar
         background_knots=settings.background_knots,
     )
     weights = _model_weights(spectra, weights, claimed, nuisance)
+    if no_star and len(spectra) >= MIN_SPAXELS:
+        kept = ~excluded_spaxels((ny, nx), scenery, DEFAULT_FWHM_PIXELS).ravel()
+        nuisance = _with_common_residual(spectra, weights, nuisance, kept, notes)
     del claimed
     fit = fit_spaxels(spectra, weights, nuisance, in_place=True)
     if len(weights) >= MIN_SPAXELS:
@@ -434,6 +439,40 @@ def _model_weights(
     np.divide(np.float32(1.0), variance, out=variance)
     variance[bad] = 0.0
     return variance
+
+
+def _with_common_residual(
+    spectra: NDArray[np.float32],
+    weights: NDArray[np.float32],
+    nuisance: Nuisance,
+    kept: NDArray[np.bool_],
+    notes: list[Note],
+) -> Nuisance:
+    """The residual spectrum that all spaxels share, as one more column, where it is there.
+
+    Without a star that carries it, what the sky subtraction left is common to the field and adds up in a PSF sum.
+    A median over companion-free spaxels: a companion that nobody told of is a small minority.
+    """
+    residual = fit_spaxels(spectra, weights, nuisance).residual
+    good = (weights > 0) & kept[:, None]
+    count = good.sum(axis=0)
+    enough = count >= MIN_SPAXELS
+    if not enough.any():
+        return nuisance
+    normalised = np.where(good, residual * np.sqrt(weights), np.nan)[:, enough]
+    spread = np.sqrt(np.nanmean(np.square(np.nansum(normalised, axis=0)) / count[enough]))
+    if spread < COMMON_SPREAD:
+        return nuisance
+    common = np.zeros(spectra.shape[1])
+    common[enough] = np.nanmedian(np.where(good, residual, np.nan)[:, enough], axis=0)
+    notes.append(
+        Note(
+            "common-residual",
+            f"the field shares a residual spectrum (sums over spaxels scatter {spread:.1f} times their error); it is "
+            "fitted in every spaxel",
+        )
+    )
+    return replace(nuisance, extras=np.vstack([nuisance.extras, common]))
 
 
 def _audit_notes(audited: NoiseAudit, cube: Cube) -> list[Note]:

@@ -17,6 +17,7 @@ MAD_TO_SIGMA = 1.4826
 MEDIAN_OF_CHI2 = 0.454936
 """Of one degree of freedom."""
 OUTLIER_SIGMA = 6.0
+EXCESS_SIGMA = 4.0
 MIN_SPAXELS = 30
 """Fewer spaxels than this cannot support a regression over the field."""
 
@@ -180,6 +181,48 @@ def flag_outliers(
         scale[p] = MAD_TO_SIGMA * np.median(normalised)
         outlier[p, ok] = normalised > limit * max(scale[p], 1.0)
     return outlier, scale
+
+
+def excess_scatter(
+    residual: NDArray[np.float32], weights: NDArray[np.float32]
+) -> tuple[NDArray[np.float32], NDArray[np.float32]]:
+    """How far channels and spaxels scatter beyond the weights, where that is significant.
+
+    Sky-line residuals make whole channels worse than claimed, speckle residuals whole spaxels.
+
+    Parameters
+    ----------
+    residual, weights : float32 arrays (n_spaxel, n_wave)
+
+    Returns
+    -------
+    channel : float32 array (n_wave,)
+    spaxel : float32 array (n_spaxel,)
+        Factors >= 1 on sigma; exactly 1 where the excess is below EXCESS_SIGMA times its own error, so that
+        weights do not follow the noise.
+    """
+    n_spaxel, n_wave = residual.shape
+    spaxel = np.ones(n_spaxel)
+    for p, (row, weight) in enumerate(zip(residual, weights, strict=True)):
+        ok = weight > 0
+        if ok.sum() >= MIN_SPAXELS:
+            spaxel[p] = MAD_TO_SIGMA * np.median(np.abs(row[ok]) * np.sqrt(weight[ok]))
+    typical = np.median(spaxel)
+    spaxel = _significant(spaxel / typical, np.count_nonzero(weights, axis=1))
+    channel = np.ones(n_wave)
+    for i in range(n_wave):
+        ok = weights[:, i] > 0
+        if ok.sum() >= MIN_SPAXELS:
+            scaled = np.abs(residual[ok, i]) * np.sqrt(weights[ok, i]) / (spaxel[ok] * typical)
+            channel[i] = MAD_TO_SIGMA * np.median(scaled)
+    channel = _significant(channel, np.count_nonzero(weights, axis=0))
+    return channel.astype(np.float32), spaxel.astype(np.float32)
+
+
+def _significant(factor: NDArray, count: NDArray) -> NDArray[np.float64]:
+    """Factors above one by more than EXCESS_SIGMA errors of a scaled MAD (1.17 / sqrt(n)), others one."""
+    limit = 1.0 + EXCESS_SIGMA * 1.17 / np.sqrt(np.maximum(count, 1))
+    return np.where(factor > limit, factor, 1.0)
 
 
 def audit(

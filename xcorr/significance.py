@@ -17,6 +17,8 @@ from scipy import stats
 from xcorr.errors import CoverageError
 
 MIN_NULL_POSITIONS = 6
+TARGET_KEEP_OUT_FWHM = 2.0
+"""Null positions stay this far from the target: its light there is below 2e-5 of its peak, halo apart."""
 SNR_CEILING_P = 1e-300
 """Probabilities below this are reported as this."""
 FAMILY_P = 0.01
@@ -309,7 +311,7 @@ def _is_free(
     x, y = position
     if not (0.5 * fwhm <= x <= nx - 1 - 0.5 * fwhm and 0.5 * fwhm <= y <= ny - 1 - 0.5 * fwhm):
         return False
-    if np.hypot(x - target[0], y - target[1]) < 2.5 * fwhm:
+    if np.hypot(x - target[0], y - target[1]) < TARGET_KEEP_OUT_FWHM * fwhm:
         return False
     if any(np.hypot(x - sx, y - sy) < radius + 1.5 * fwhm for sx, sy, radius in sources):
         return False

@@ -122,4 +122,7 @@ def study(n: int, seed: int, jobs: int) -> dict[str, Any]:
 
 
 if __name__ == "__main__":
-    main(study, "S/N against the information limit", 400)
+    # imported by name, so that worker processes find what they unpickle
+    from tests.studies.efficiency import study as importable
+
+    main(importable, "S/N against the information limit", 400)

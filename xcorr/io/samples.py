@@ -206,13 +206,28 @@ def _flagged(
     return np.asarray(unknown | ((flags & wanted) != 0))
 
 
+ABSURD_VARIANCE = 1e-3
+"""Samples that claim less than this fraction of the median variance are masked: resampling at the edge of a
+gap leaves errors near zero, and one of them would outweigh the whole spectrum."""
+
+
+def _typical_variance(samples: Samples) -> float:
+    """Median claimed variance of the usable samples, from every 37th of them."""
+    assert samples.variance is not None  # callers check
+    values = samples.variance.reshape(-1)[::37]
+    usable = ~samples.mask.reshape(-1)[::37] & np.isfinite(values) & (values > 0)
+    return float(np.median(values[usable])) if usable.any() else 0.0
+
+
 def finish(samples: Samples) -> None:
-    """Masked data become 0 and masked variances 1; errors too large or small for float32 are masked."""
+    """Masked data become 0 and masked variances 1; errors too large or small to be used are masked."""
     if samples.variance is not None:
+        floor = np.float32(ABSURD_VARIANCE * _typical_variance(samples))
         for start in range(0, samples.variance.shape[0], _BLOCK):
             part = slice(start, start + _BLOCK)
             block = samples.variance[part]
             samples.add_mask(part, ~np.isfinite(block) | (block <= 0), "no positive error")
+            samples.add_mask(part, block < floor, "error absurdly small")
         np.copyto(samples.variance, np.float32(1), where=samples.mask)
     np.copyto(samples.data, np.float32(0), where=samples.mask)
     _refuse_if_all_masked(samples, "no usable sample remains")
