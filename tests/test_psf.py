@@ -9,6 +9,7 @@ from xcorr.errors import InputError
 from xcorr.psf import (
     DEFAULT_BETA,
     MoffatPsf,
+    core_and_wing,
     find_peak,
     fit_star_image,
     make_stamps,
@@ -85,26 +86,68 @@ def test_sampled_psf_is_normalised_centred_and_interpolates():
         sampled_psf(-image, WAVE)
 
 
+def test_profiles_are_integrated_over_pixels():
+    """Against adaptive quadrature over one pixel; three Gauss points a side are exact to the sixth power."""
+    for x, y in ((0.0, 0.0), (0.4, -0.3), (1.6, 0.8)):
+        exact = dblquad(
+            lambda v, u: float(moffat(u, v, 2.4, 2.0, 0.3, 3.0)), x - 0.5, x + 0.5, y - 0.5, y + 0.5
+        )[0]
+        found = core_and_wing(np.array(x), np.array(y), 2.4, 2.0, 0.3, 3.0, 0.0, 3.0)
+        assert found == pytest.approx(exact, rel=2e-3)
+    # control: the value at the centre is off by several per cent in the core
+    centre = core_and_wing(np.array(0.0), np.array(0.0), 2.4, 2.0, 0.3, 3.0, 0.0, 3.0)
+    assert moffat(0.0, 0.0, 2.4, 2.0, 0.3, 3.0) / centre > 1.05
+
+
+def test_core_and_wing_share_unit_flux():
+    y, x = np.mgrid[-60:61, -60:61].astype(float)
+    for share in (0.0, 0.4):
+        total = core_and_wing(x, y, 2.4, 2.0, 0.3, 4.0, share, 3.0).sum()
+        # the wing falls as r^-5: (7 / 60)^3 of it lies outside
+        assert total == pytest.approx(1.0, abs=2e-3)
+
+
 # ---------------------------------------------------------------- the star's image
+
+
+def noisy_star(psf, xy, seed=1):
+    """Noise of a thousandth of the peak."""
+    images = star_cube(psf, xy)
+    rng = np.random.default_rng(seed)
+    return images + 1e-3 * images.max() * np.sqrt(images / images.max() + 0.01) * rng.standard_normal(
+        images.shape
+    )
 
 
 def test_the_fit_recovers_widths_angle_drift_and_flux():
     psf, xy = elliptical(), (11.3, 9.6)
-    rng = np.random.default_rng(1)
-    images = star_cube(psf, xy, background=3.0)
-    images = images + np.sqrt(images + 100) * 0.1 * rng.standard_normal(images.shape)
-    found = fit_star_image(NODES, images, (11.0, 10.0), NOTHING)
+    found = fit_star_image(NODES, noisy_star(psf, xy), (11.0, 10.0), NOTHING)
     assert found.star_xy == pytest.approx(xy, abs=0.01)
-    # noise of 1e-3 of the peak; the model is the true one, so only noise is left
     assert found.psf.drift_xy == pytest.approx(psf.drift_xy, abs=0.02)
+    # second moments of the core, whatever axes the fit chose; a wing can take the place of a low exponent
     order = np.mean(found.psf.fwhm_x) > np.mean(found.psf.fwhm_y)
     major, minor = (found.psf.fwhm_x, found.psf.fwhm_y) if order else (found.psf.fwhm_y, found.psf.fwhm_x)
-    assert major == pytest.approx(psf.fwhm_x, rel=0.02)
-    assert minor == pytest.approx(psf.fwhm_y, rel=0.02)
+    assert major == pytest.approx(psf.fwhm_x, rel=0.03)
+    assert minor == pytest.approx(psf.fwhm_y, rel=0.03)
     angle = found.psf.angle if order else found.psf.angle + np.pi / 2
     assert np.sin(angle - psf.angle) == pytest.approx(0.0, abs=0.03)
-    assert found.flux == pytest.approx(1e5, rel=0.01)
+    # flux is counted with the fitted profile, whose wings are not well known inside 2.2 FWHM
+    assert found.flux == pytest.approx(1e5, rel=0.04)
     assert found.residual < 0.005
+    # what the search uses: the profile in the stamp, up to the same factor
+    y, x = np.mgrid[-3:4, -3:4].astype(float)
+    ratio = found.psf.profile(x, y) * (found.flux / 1e5)[:, None, None] / psf.profile(x, y)
+    assert ratio[:, 2:5, 2:5] == pytest.approx(1.0, abs=0.01)
+    assert ratio == pytest.approx(1.0, abs=0.15)
+
+
+def test_a_wing_is_found():
+    psf = MoffatPsf(NODES, np.full(8, 2.4), np.full(8, 2.4), 0.0, 4.0, np.zeros((8, 2)), np.full(8, 0.4), 3.0)
+    found = fit_star_image(NODES, noisy_star(psf, (11.3, 9.6)), (11.0, 10.0), NOTHING)
+    y, x = np.mgrid[-3:4, -3:4].astype(float)
+    ratio = found.psf.profile(x, y) * (found.flux / 1e5)[:, None, None] / psf.profile(x, y)
+    assert ratio == pytest.approx(1.0, abs=0.1)
+    assert np.mean(found.psf.wing_share) > 0.15
 
 
 def test_a_masked_core_and_an_excluded_companion_do_not_bend_the_fit():
@@ -116,8 +159,7 @@ def test_a_masked_core_and_an_excluded_companion_do_not_bend_the_fit():
     images[:, companion] += 2e3
     found = fit_star_image(NODES, images, (11.0, 10.0), companion)
     assert found.star_xy == pytest.approx(xy, abs=0.02)
-    assert found.psf.fwhm_pixels == pytest.approx(psf.fwhm_pixels, rel=0.02)
-    assert found.flux == pytest.approx(1e5, rel=0.03)
+    assert found.psf.fwhm_pixels == pytest.approx(psf.fwhm_pixels, rel=0.05)
     # control: not excluded, the companion pulls the centroid
     pulled = fit_star_image(NODES, images, (11.0, 10.0), NOTHING)
     assert np.hypot(*np.subtract(pulled.star_xy, xy)) > 3 * np.hypot(*np.subtract(found.star_xy, xy))
@@ -141,8 +183,15 @@ def test_a_simulated_star_gives_its_own_psf():
     # nodes are the middles of 8 bins: 7/8 of the whole drift
     expected = (drift[1] - drift[0]) * 7 / 8
     assert found.psf.drift_xy[-1] - found.psf.drift_xy[0] == pytest.approx(expected, abs=0.03)
-    # the simulator integrates over the pixel, the fit does not: 1 pixel adds 1/12 to the variance
-    assert found.psf.fwhm_pixels == pytest.approx(np.hypot(2.4, 2.3548 / np.sqrt(12)), rel=0.06)
+    # widths without the pixel; the simulator's PSF widens with wavelength about 2.4 pixels
+    assert found.psf.fwhm_pixels == pytest.approx(2.4, rel=0.05)
+    # the profile is the image: what star and companion share
+    image = exposure.star_psf[300]
+    rows, columns = np.indices(image.shape)
+    x, y = exposure.star_xy[300]
+    middle = found.psf.profile(columns - found.star_xy[0], rows - found.star_xy[1])[3:5].mean(axis=0)
+    near = np.hypot(columns - x, rows - y) < 3
+    assert np.max(np.abs(middle - image)[near]) < 0.03 * image.max()
 
 
 def test_node_images_average_usable_samples():
