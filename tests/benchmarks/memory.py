@@ -88,7 +88,8 @@ def watch(folder: Path, trace: bool) -> dict[str, float]:
 
     command = [sys.executable, "-m", "xcorr", "run", str(folder / "run.toml"), "--out", str(folder / "out")]
     start = time.perf_counter()
-    child = subprocess.Popen([*command, "--quiet"], cwd=Path(__file__).resolve().parents[2])
+    root = Path(__file__).resolve().parents[2]
+    child = subprocess.Popen([*command, "--quiet"], cwd=root, stdout=subprocess.DEVNULL)
     process, peak, samples = psutil.Process(child.pid), 0.0, []
     while child.poll() is None:
         try:
