@@ -5,6 +5,7 @@ from dataclasses import replace
 
 import numpy as np
 import pytest
+from astropy.io import fits
 
 from tests.small_scenes import chosen, cubes, scene, settings, templates
 from xcorr.config import parse_settings
@@ -271,6 +272,39 @@ def test_no_usable_spaxel_under_the_companion(bright):
     mask = cube.mask | (np.hypot(columns - x, rows - y) < 4.2)
     with pytest.raises(SettingsError, match="no usable spaxel under the companion"):
         search(bright, data=[cube.with_changes(mask=mask)])
+
+
+# ---------------------------------------------------------------- files of PSF and star
+
+
+def test_a_psf_image_serves_as_well_as_the_fitted_star(bright, tmp_path):
+    """A well sampled noiseless image of the star, off its pixel's centre, as [psf].file."""
+    image = bright.exposures[0].star_psf.mean(axis=0)
+    fits.PrimaryHDU(image.astype(np.float32)).writeto(tmp_path / "psf.fits")
+    result = search(bright, ("full",), extra=f"[psf]\nfile = '{tmp_path / 'psf.fits'}'\n")
+    assert result.molecules[0].snr_raw == pytest.approx(30.0, abs=3.5)
+    assert result.inputs[-2].file == "psf.fits"
+    assert len(result.inputs[-2].sha256) == 64
+
+
+def test_the_stars_spectrum_from_a_file(bright, tmp_path):
+    """On a finer grid than the cube's; the amplitude then rests on the file's flux."""
+    wave = np.linspace(2.24, 2.39, 1500)
+    flux = np.interp(wave, bright.cubes[0].wavelength_um, bright.exposures[0].star_spectrum)
+    table = "# medium = vacuum\n# wavelength_um flux\n" + "\n".join(
+        f"{w:.7f} {f:.6e}" for w, f in zip(wave, flux, strict=True)
+    )
+    (tmp_path / "star.txt").write_text(table)
+    result = search(bright, ("full",), extra=f"[starlight]\nreference = '{tmp_path / 'star.txt'}'\n")
+    assert result.molecules[0].snr_raw == pytest.approx(30.0, abs=3.5)
+    assert "star.txt" in [item.file for item in result.inputs]
+    short = wave > 2.34
+    (tmp_path / "short.txt").write_text(
+        "# medium = vacuum\n# wavelength_um flux\n"
+        + "\n".join(f"{w:.7f} {f:.6e}" for w, f in zip(wave[short], flux[short], strict=True))
+    )
+    with pytest.raises(InputError, match="covers too few channels"):
+        search(bright, ("full",), extra=f"[starlight]\nreference = '{tmp_path / 'short.txt'}'\n")
 
 
 # ---------------------------------------------------------------- errors of the data
