@@ -11,13 +11,14 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.ndimage import generic_filter1d, uniform_filter1d
+from scipy.ndimage import generic_filter1d, median_filter, uniform_filter1d
 
 MAD_TO_SIGMA = 1.4826
 MEDIAN_OF_CHI2 = 0.454936
 """Of one degree of freedom."""
 OUTLIER_SIGMA = 6.0
 EXCESS_SIGMA = 4.0
+SMOOTH_CHANNELS = 31
 MIN_SPAXELS = 30
 """Fewer spaxels than this cannot support a regression over the field."""
 
@@ -28,7 +29,11 @@ def robust_sigma(values: NDArray, axis: int | None = None) -> NDArray:
 
 
 def model_variance(
-    claimed: NDArray[np.float32], usable: NDArray[np.bool_], model: NDArray[np.float32]
+    claimed: NDArray[np.float32],
+    usable: NDArray[np.bool_],
+    model: NDArray[np.float32],
+    *,
+    smooth: bool = False,
 ) -> NDArray[np.float32]:
     """Claimed variances smoothed by a linear law in the fitted model: k_p (alpha m + beta) per channel.
 
@@ -38,6 +43,9 @@ def model_variance(
     usable : bool array (n_spaxel, n_wave)
     model : float32 array (n_spaxel, n_wave)
         Fitted starlight.
+    smooth : bool
+        Smooth alpha (photon noise) and beta (background) along wavelength too: for claims that are squared
+        residuals, of which a channel has too few.
 
     Returns
     -------
@@ -47,6 +55,8 @@ def model_variance(
     scale = _spaxel_median(claimed, usable)
     inverse = np.divide(1.0, scale, out=np.zeros_like(scale), where=scale > 0).astype(np.float32)
     alpha, beta = _channel_line(claimed, model, usable, inverse)
+    if smooth:
+        alpha, beta = (median_filter(a, SMOOTH_CHANNELS, mode="nearest") for a in (alpha, beta))
     return _scaled_law(alpha, beta, model, claimed, usable, scale)
 
 
@@ -108,7 +118,7 @@ def scatter_variance(
     if len(residual) >= MIN_SPAXELS:
         clipped = np.minimum(squares, 9.0 * _row_scale(residual, usable)[:, None] ** 2).astype(np.float32)
         # the law is scaled by medians, and the median of a chi-square variable is 0.455 of its mean
-        return model_variance((clipped / MEDIAN_OF_CHI2).astype(np.float32), usable, model)
+        return model_variance((clipped / MEDIAN_OF_CHI2).astype(np.float32), usable, model, smooth=True)
     return np.stack([running_variance(row, ok) for row, ok in zip(residual, usable, strict=True)])
 
 

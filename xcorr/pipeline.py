@@ -28,8 +28,8 @@ from xcorr.template import Template
 log = logging.getLogger("xcorr.pipeline")
 Progress = Callable[[int, int, str], None]
 REWEIGHTINGS = 2
-NULL_REACH_KM_S = 2000.0
-"""An extracted spectrum has no other positions: its null reaches this far beyond the searched velocities."""
+NULL_EDGE_KM_S = 3000.0
+"""An extracted spectrum has no other positions: its null runs out to here, and 1000 km/s past the searched range."""
 MAX_NULL_VELOCITIES = 1500
 
 
@@ -101,7 +101,8 @@ def _null_grid(velocity_km_s: NDArray) -> tuple[NDArray[np.float64], slice]:
     if n < 2:
         return velocity_km_s, slice(0, n)
     step = velocity_km_s[1] - velocity_km_s[0]
-    more = min(int(NULL_REACH_KM_S / step), max(0, (MAX_NULL_VELOCITIES - n) // 2))
+    reach = max(1000.0, NULL_EDGE_KM_S - float(np.abs(velocity_km_s).max()))
+    more = min(int(reach / step), max(0, (MAX_NULL_VELOCITIES - n) // 2))
     below = velocity_km_s[0] - step * np.arange(more, 0, -1)
     above = velocity_km_s[-1] + step * np.arange(1, more + 1)
     return np.concatenate([below, velocity_km_s, above]), slice(more, more + n)
