@@ -88,23 +88,30 @@ class Cube:
     def __post_init__(self) -> None:
         data, mask = self.data, self.mask
         if data.ndim != 3 or data.dtype != np.float32:
-            raise InputError("cube data must be float32 (wave, y, x)", f"{data.dtype} {data.shape}", "convert")
+            raise InputError(
+                "cube data must be float32 (wave, y, x)", f"{data.dtype} {data.shape}", "convert"
+            )
         if mask.shape != data.shape or mask.dtype != np.bool_:
             raise InputError("mask must be boolean with the shape of the data", f"{mask.dtype} {mask.shape}")
         if self.variance is not None and (
             self.variance.shape != data.shape or self.variance.dtype != np.float32
         ):
             raise InputError(
-                "variance must be float32 with the shape of the data", f"{self.variance.dtype} {self.variance.shape}"
+                "variance must be float32 with the shape of the data",
+                f"{self.variance.dtype} {self.variance.shape}",
             )
         wavelength = np.asarray(self.wavelength_um, dtype=np.float64)
-        order = np.zeros(wavelength.size, np.int16) if self.order is None else np.asarray(self.order, np.int16)
+        order = (
+            np.zeros(wavelength.size, np.int16) if self.order is None else np.asarray(self.order, np.int16)
+        )
         if wavelength.shape != (data.shape[0],) or order.shape != wavelength.shape:
             raise InputError(
                 "one wavelength and one order per channel needed", f"{wavelength.shape} and {order.shape}"
             )
         if not np.all(np.isfinite(wavelength)) or np.any(wavelength <= 0):
-            raise InputError("wavelengths must be finite and positive", f"{wavelength.min()} um", "check the header")
+            raise InputError(
+                "wavelengths must be finite and positive", f"{wavelength.min()} um", "check the header"
+            )
         step, same = np.diff(wavelength), np.diff(order) == 0
         if np.any(step[same] <= 0) or np.any(np.diff(order) < 0):
             bad = int(np.argmax((step <= 0) & same))
@@ -121,9 +128,13 @@ class Cube:
             if resolving.ndim == 0:
                 resolving = np.full(wavelength.size, float(resolving))
             if resolving.shape not in (wavelength.shape, data.shape):
-                raise InputError("resolving power has the wrong shape", str(resolving.shape), "one per channel")
+                raise InputError(
+                    "resolving power has the wrong shape", str(resolving.shape), "one per channel"
+                )
             if not np.all(np.isfinite(resolving)) or np.any(resolving <= 0):
-                raise InputError("resolving power must be positive", f"{resolving.min()}", "give R = lambda/FWHM")
+                raise InputError(
+                    "resolving power must be positive", f"{resolving.min()}", "give R = lambda/FWHM"
+                )
         for name, value in (("wavelength_um", wavelength), ("order", order), ("resolving_power", resolving)):
             object.__setattr__(self, name, value)
         for array in (data, self.variance, mask, wavelength, order, resolving):

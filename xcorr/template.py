@@ -55,8 +55,12 @@ class Template:
     def __post_init__(self) -> None:
         wavelength = np.ascontiguousarray(self.wavelength_um, dtype=np.float64)
         flux = np.ascontiguousarray(self.flux, dtype=np.float64)
-        reference = flux if self.reference_flux is None else np.ascontiguousarray(self.reference_flux, np.float64)
-        covered = np.ones(flux.size, bool) if self.covered is None else np.ascontiguousarray(self.covered, bool)
+        reference = (
+            flux if self.reference_flux is None else np.ascontiguousarray(self.reference_flux, np.float64)
+        )
+        covered = (
+            np.ones(flux.size, bool) if self.covered is None else np.ascontiguousarray(self.covered, bool)
+        )
         if wavelength.ndim != 1 or wavelength.size < 16:
             raise InputError(f"template {self.name!r} needs at least 16 samples", f"{wavelength.size}")
         if not (flux.shape == wavelength.shape == reference.shape == covered.shape):
@@ -68,11 +72,17 @@ class Template:
                 "sort the file and drop repeated rows",
             )
         if not np.all(np.isfinite(flux[covered])) or not np.all(np.isfinite(reference[covered])):
-            raise InputError(f"template {self.name!r}: flux holds non-finite values", "NaN or inf", "drop them")
+            raise InputError(
+                f"template {self.name!r}: flux holds non-finite values", "NaN or inf", "drop them"
+            )
         if self.kind not in KINDS:
-            raise InputError(f"template {self.name!r}: unknown kind", self.kind, f"use one of {', '.join(KINDS)}")
+            raise InputError(
+                f"template {self.name!r}: unknown kind", self.kind, f"use one of {', '.join(KINDS)}"
+            )
         if self.resolving_power is not None and not self.resolving_power > 0:
-            raise InputError(f"template {self.name!r}: resolving power must be positive", str(self.resolving_power))
+            raise InputError(
+                f"template {self.name!r}: resolving power must be positive", str(self.resolving_power)
+            )
         for name, value in (
             ("wavelength_um", wavelength),
             ("flux", flux),
