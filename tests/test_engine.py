@@ -6,8 +6,9 @@ import numpy as np
 import pytest
 
 from tests.small_scenes import chosen, cubes, scene
+from xcorr.columns import template_columns
 from xcorr.engine import ExposureEngine, add
-from xcorr.exposure import Scenery, StarlightSettings, prepare, template_columns
+from xcorr.exposure import Scenery, StarlightSettings, prepare
 from xcorr.kernels import reference
 from xcorr.kernels.threads import limited_threads
 

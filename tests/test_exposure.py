@@ -6,17 +6,12 @@ import numpy as np
 import pytest
 
 from tests.small_scenes import RANGE, chosen, cubes, scene, templates
+from xcorr.columns import template_columns
 from xcorr.errors import CoverageError, InputError
-from xcorr.exposure import (
-    Scenery,
-    StarlightSettings,
-    excluded_spaxels,
-    planck_shape,
-    prepare,
-    template_columns,
-)
+from xcorr.exposure import Scenery, StarlightSettings, excluded_spaxels, prepare
 from xcorr.psf import moffat_of_width
 from xcorr.star import StarSpectrum
+from xcorr.throughput import planck_shape
 
 DRAW = (("contrast", 3e-3), ("companion_velocity_km_s", 40.0))
 

@@ -15,7 +15,7 @@ LAYERS = (
     *("cube", "template", "results"),
     "io",
     *("lines", "atmosphere", "tellurics", "psf", "geometry", "starlight", "star", "noise", "search"),
-    *("significance", "exposure", "engine", "answer", "assemble"),
+    *("significance", "weights", "throughput", "exposure", "columns", "engine", "answer", "assemble"),
     *("vetting", "injection", "abundance", "simulate"),
     *("inspection", "report", "_config_errors", "config", "inputs", "pipeline", "cli"),
 )

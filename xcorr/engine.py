@@ -8,7 +8,8 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from xcorr.exposure import PreparedExposure, TemplateColumns
+from xcorr.columns import TemplateColumns
+from xcorr.exposure import PreparedExposure
 from xcorr.kernels.projection import whiten_overlaps
 from xcorr.kernels.summation import psf_sums
 from xcorr.psf import Stamps, make_stamps

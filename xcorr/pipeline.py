@@ -13,11 +13,12 @@ from numpy.typing import NDArray
 
 from xcorr.answer import Curves, Evidence, calibrated_curves, fitted_signal, judge
 from xcorr.assemble import ATTRIBUTES, curve_arrays, exposure_arrays, map_arrays
+from xcorr.columns import template_columns
 from xcorr.config import Settings, check_molecules, load_settings
 from xcorr.cube import Cube
 from xcorr.engine import ExposureEngine, Sums, add
 from xcorr.errors import CoverageError, Note
-from xcorr.exposure import PreparedExposure, prepare, template_columns
+from xcorr.exposure import PreparedExposure, prepare
 from xcorr.inputs import Exposures, describe_position
 from xcorr.kernels.threads import limited_threads
 from xcorr.provenance import versions

@@ -18,7 +18,8 @@ from xcorr.errors import CoverageError
 
 MIN_NULL_POSITIONS = 6
 TARGET_KEEP_OUT_FWHM = 2.0
-"""Null positions stay this far from the target: its light there is below 2e-5 of its peak, halo apart."""
+"""Null positions stay this far from the target. The filters of a Gaussian PSF then overlap by 0.4 per cent: a companion
+of S/N 100 adds 0.4 to the nearest of them."""
 SNR_CEILING_P = 1e-300
 """Probabilities below this are reported as this."""
 FAMILY_P = 0.01

@@ -16,7 +16,7 @@ from xcorr.starlight import fit_spaxels, nuisance_model
 
 BRIGHT_FRACTION = 0.05
 """Spaxels brighter than this fraction of the brightest usable one make the reference."""
-ITERATIONS = 2
+ITERATIONS = 4
 
 
 @dataclass(frozen=True)

@@ -82,7 +82,7 @@ def measure(case: Case) -> dict[str, float]:
         }
     )
     patch = (
-        mock.patch("xcorr.exposure.load_transmission", no_transmission)
+        mock.patch("xcorr.throughput.load_transmission", no_transmission)
         if case.cell == "fallback"
         else contextlib.nullcontext()
     )
