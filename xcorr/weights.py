@@ -103,12 +103,14 @@ def audit_notes(audited: NoiseAudit, cube: Cube) -> list[Note]:
                 "significance is calibrated on nulls, not on the claim",
             )
         )
+    correlations = [f"{audited.neighbour_channel:.2f} with the next channel"]
+    if np.isfinite(audited.neighbour_spaxel):
+        correlations.append(f"{audited.neighbour_spaxel:.2f} with the next spaxel")
     if audited.neighbour_channel > 0.1 or audited.neighbour_spaxel > 0.1:
         notes.append(
             Note(
                 "noise-correlated",
-                f"residuals correlate by {audited.neighbour_channel:.2f} with the next channel and "
-                f"{audited.neighbour_spaxel:.2f} with the next spaxel; the null calibration takes this up",
+                f"residuals correlate by {' and '.join(correlations)}; the null calibration takes this up",
             )
         )
     return notes
