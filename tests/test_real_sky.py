@@ -20,7 +20,9 @@ from xcorr.results import MoleculeResult, RunResult
 SHOWN = ("detected", "evidence")
 
 
-def search_spectrum(folder: Path, file: str, resolving_power: float, t_eff: float, orders: str = "") -> RunResult:
+def search_spectrum(
+    folder: Path, file: str, resolving_power: float, t_eff: float, orders: str = ""
+) -> RunResult:
     """K-band search of an extracted spectrum, knots frozen at 60 as for all bright one-dimensional spectra.
 
     Field dwarfs are searched within 500 km/s: faster ones would leave the Galaxy (common practice, no source).

@@ -20,6 +20,8 @@ from xcorr.errors import InputError
 N_NODE = 8
 DEFAULT_BETA = 4.765
 """Moffat exponent of a turbulence-limited image (Trujillo et al. 2001, MNRAS 328, 977)."""
+PIXEL_FWHM = 2.3548200450309493 / np.sqrt(12.0)
+"""FWHM of the Gaussian with the variance of a pixel."""
 MAX_WING = 0.9
 WING_BETA = 2.5
 """Exponent of the wing, close to that of a long-exposure seeing halo (common practice, no source)."""
@@ -76,8 +78,8 @@ class MoffatPsf:
 
     @property
     def fwhm_pixels(self) -> float:
-        """Geometric mean FWHM over the nodes, the pixel not included."""
-        return float(np.sqrt(np.mean(self.fwhm_x) * np.mean(self.fwhm_y)))
+        """FWHM of the core as sampled: geometric mean over the nodes, the pixel in quadrature."""
+        return float(np.sqrt(np.mean(self.fwhm_x) * np.mean(self.fwhm_y) + PIXEL_FWHM**2))
 
     def profile(self, dx: NDArray, dy: NDArray) -> NDArray[np.float64]:
         """Flux per spaxel, (n_node, *dx.shape)."""
@@ -199,9 +201,9 @@ def _windowed_centroid(image: NDArray) -> tuple[float, float]:
 
 
 def moffat_of_width(fwhm_pixels: float, wavelength_um: NDArray) -> MoffatPsf:
-    """A round PSF of given FWHM at all wavelengths, without drift."""
+    """A round PSF of given FWHM, as sampled, at all wavelengths, without drift."""
     nodes = np.array([wavelength_um.min(), wavelength_um.max()])
-    width = np.full(2, float(fwhm_pixels))
+    width = np.full(2, np.sqrt(max(float(fwhm_pixels) ** 2 - PIXEL_FWHM**2, 0.16)))
     return MoffatPsf(nodes, width, width.copy(), 0.0, DEFAULT_BETA, np.zeros((2, 2)))
 
 
