@@ -16,7 +16,7 @@ from xcorr.errors import InputError, Note, OutputError
 from xcorr.io.output import output_directory
 from xcorr.io.results import file_stems, read_result, write_hdf5, write_result
 from xcorr.io.summary import summary_text
-from xcorr.report.tables import latex_table, text_table
+from xcorr.report.tables import _plus_minus, latex_table, text_table
 from xcorr.results import InputFile, MoleculeResult, NullSummary, RunResult
 
 # CONTRACTS, "Output of run": the keys in their order.
@@ -339,3 +339,15 @@ def test_places_that_cannot_be_written(tmp_path):
     with pytest.raises(OSError, match="Not a directory"), output_directory(file / "out"):
         pass
     assert tree(tmp_path) == ["file"]
+
+
+@pytest.mark.parametrize(
+    ("value", "error", "text"),
+    [
+        (9.5e-16, 8.3e-16, "(9.5 +- 8.3)e-16"),
+        (-2.5e7, 1.26e6, "(-2.50 +- 0.13)e7"),
+        (0.0007, 0.0001, "0.00070 +- 0.00010"),
+    ],
+)
+def test_strengths_in_tiny_or_huge_units_stay_readable(value, error, text):
+    assert _plus_minus(value, error) == text

@@ -75,9 +75,29 @@ def null_words(row: MoleculeResult) -> str:
     return ", ".join(words) or "no nulls"
 
 
+def scaled(value: float, error: float) -> tuple[float, float, int]:
+    """Value and error over a power of ten, and that power: 0 where plain decimals stay short.
+
+    Examples
+    --------
+    >>> scaled(9.5e-16, 8.3e-16)
+    (9.5, 8.3, -16)
+    >>> scaled(0.0007, 0.0001)
+    (0.0007, 0.0001, 0)
+    """
+    size = max(abs(value), abs(error)) if math.isfinite(error) else abs(value)
+    if not math.isfinite(size) or size == 0 or 1e-5 <= size < 1e6:
+        return value, error, 0
+    power = math.floor(math.log10(size))
+    return float(f"{value / 10.0**power:.6g}"), float(f"{error / 10.0**power:.6g}"), power
+
+
 def _plus_minus(value: float, error: float) -> str:
+    value, error, power = scaled(value, error)
     shown, spread = rounded(value, error)
-    return shown if spread == _DASH else f"{shown} +- {spread}"
+    if spread == _DASH:
+        return f"{shown}e{power}" if power else shown
+    return f"({shown} +- {spread})e{power}" if power else f"{shown} +- {spread}"
 
 
 def _cells(row: MoleculeResult) -> list[str]:
@@ -129,10 +149,14 @@ def tex_escape(text: str) -> str:
 
 
 def _tex_plus_minus(value: float, error: float) -> str:
+    value, error, power = scaled(value, error)
     shown, spread = rounded(value, error)
     if shown == _DASH:
         return "--"
-    return f"${shown}$" if spread == _DASH else rf"${shown} \pm {spread}$"
+    times = rf" \times 10^{{{power}}}" if power else ""
+    if spread == _DASH:
+        return f"${shown}{times}$"
+    return rf"$({shown} \pm {spread}){times}$" if power else rf"${shown} \pm {spread}$"
 
 
 def _tex_probability(row: MoleculeResult) -> str:
