@@ -22,7 +22,21 @@ LAYERS = (
 COMMAND_LINE = ("cli", "commands", "__main__")
 SCIENCE = LAYERS[LAYERS.index("lines") : LAYERS.index("simulate") + 1]
 # What a scene must not share with the search, or the efficiency target were true by construction.
-SIMULATE_AVOIDS = ("starlight", "search", "psf", "tellurics", "star", "spectral.lsf")
+SIMULATE_AVOIDS = (
+    *(
+        "starlight",
+        "search",
+        "psf",
+        "tellurics",
+        "star",
+        "noise",
+        "weights",
+        "throughput",
+        "exposure",
+        "columns",
+    ),
+    *("engine", "spectral.lsf", "spectral.columns", "spectral.channels"),
+)
 
 
 def layer_of(module: str) -> str:
@@ -118,6 +132,7 @@ def test_imports_point_one_way(module):
         ("simulate.scene", "from xcorr.spectral.lsf import LsfOperator"),
         ("simulate.scene", "from xcorr.spectral import lsf"),
         ("simulate", "from xcorr.starlight import fit"),
+        ("simulate.scene", "from xcorr.columns import template_columns"),
         ("search", "from joblib import Parallel"),
         ("report.figures", "import matplotlib.pyplot as plt"),
         ("report.figures", "from matplotlib import pyplot"),

@@ -109,7 +109,7 @@ def inspected(capsys, path, *options):
 
 
 def test_a_real_cube_in_air(reference_data, capsys):
-    """MUSE UDF cutout: CTYPE3 AWAV, variance plane whose errors are known to be close to the scatter."""
+    """A public cutout: CTYPE3 AWAV, variance plane whose errors are known to be close to the scatter."""
     found = inspected(capsys, reference_data / "cubes" / "muse_awav_cutout.fits")
     assert found["medium_of_file"] == "air"
     assert found["planes"]["error"].endswith("variance")
@@ -117,7 +117,7 @@ def test_a_real_cube_in_air(reference_data, capsys):
 
 
 def test_a_real_cube_with_absurd_errors(reference_data, capsys):
-    """GMOS public data: the error plane is constant and absurdly small (README of the reference data)."""
+    """The error plane is constant and absurdly small (README of the reference data)."""
     found = inspected(
         capsys,
         reference_data / "cubes" / "gmos_lambda.fits",
