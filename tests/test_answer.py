@@ -71,6 +71,7 @@ def judged(found):
         units=["template"] * n,
         masked_fraction=np.full(n, 0.25),
         captured=0.81,
+        scatter=1.0,
         position_xy=(3.0, 4.0),
     )
     return curves, molecules, {note.code for note in notes}

@@ -514,3 +514,25 @@ def test_progress_is_told(bright):
     assert calls[-1] == (1, 1, "done")
     assert any("exposure 1" in what for _, _, what in calls)
     assert all(0 <= done <= total for done, total, _ in calls)
+
+
+def test_noise_beyond_the_claim_in_the_companions_ring_is_no_signal():
+    # residuals of speckles: 1.6 times the claimed noise at the separation of the target, which the target and its
+    # nulls must meet with the same weights (with weights of one under the target the std was 1.57)
+    values, verdicts = [], []
+    for seed in range(10):
+        one = scene(draw=(("contrast", 0.0), ("seed", seed)))
+        cube = cubes(one)[0]
+        star = one.exposures[0].star_xy.mean(axis=0)
+        place = tuple(one.exposures[0].companion_xy.mean(axis=0))
+        rows, columns = np.indices(cube.shape[1:])
+        separation = np.hypot(columns - star[0], rows - star[1])
+        ring = np.abs(separation - np.hypot(place[0] - star[0], place[1] - star[1])) < 3.0
+        extra = np.sqrt(1.6**2 - 1.0) * np.sqrt(cube.variance) * ring
+        noise = np.random.default_rng(seed).standard_normal(cube.shape)
+        noisy = cube.with_changes(data=(cube.data + extra * noise).astype(np.float32))
+        result = run(settings(one), cubes=[noisy], templates=chosen(), maps=False)
+        values.append(result.arrays["snr_curve"][:, ::10].ravel())
+        verdicts += [row.verdict for row in result.molecules]
+    assert 0.75 < np.std(values) < 1.3
+    assert set(verdicts) == {"not detected"}

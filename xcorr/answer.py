@@ -29,6 +29,8 @@ from xcorr.significance import (
 
 FAR_ELEMENTS = 2.0
 """Velocities beyond this many resolution elements from the fitted signal count as far."""
+NEGATIVE_SNR = -4.0
+"""Calibrated S/N below which a negative amplitude is warned of."""
 ZERO_POINT_ELEMENTS = 0.02
 """Wavelength zero-point error without tellurics to check it, in resolution elements (common practice, no
 source)."""
@@ -108,9 +110,12 @@ class Curves:
 def fitted_signal(target: Sums, index: int) -> NDArray[np.float64]:
     """Amplitudes (n_molecule,) of the joint fit at one velocity; 0 outside the first set of rivals."""
     members = list(target.rivals[0])
-    amplitude, error = target.joint.subset(target.rivals[0]).joint()
+    amplitude, _ = target.joint.subset(target.rivals[0]).joint()
     out = np.zeros(target.num.shape[1])
-    out[members] = np.where(np.isfinite(error[0, :, index]), amplitude[0, :, index], 0.0)
+    # equal templates share the amplitude: their sum is the signal although neither has an error of its own
+    out[members] = np.where(
+        target.joint.subset(target.rivals[0]).diagonal[0, :, index] > 0, amplitude[0, :, index], 0.0
+    )
     return out
 
 
@@ -229,6 +234,7 @@ def judge(
     units: Sequence[str],
     masked_fraction: NDArray,
     captured: float,
+    scatter: float,
     position_xy: tuple[float, float] | None,
 ) -> tuple[tuple[MoleculeResult, ...], list[Note]]:
     """One `MoleculeResult` per template, and the doubts."""
@@ -265,9 +271,11 @@ def judge(
                     f"{name} peaks at the edge of the velocity range: widen [search].velocity_km_s",
                 )
             )
-        signal_free = law.snr(curves.signal_free[m][window])
+        # close to the signal, what the grid velocity leaves of it is negative too
+        elsewhere = np.abs(grid - strongest) > evidence.resolution_km_s
+        signal_free = np.where(elsewhere, law.snr(curves.signal_free[m][window]), np.inf)
         lowest = float(np.nanmin(signal_free))
-        if lowest < -4.0 - 0.5 * np.log10(max(1.0, span * np.sqrt(curvature))):
+        if lowest < NEGATIVE_SNR:
             at = grid[int(np.nanargmin(signal_free))]
             notes.append(
                 Note(
@@ -275,6 +283,8 @@ def judge(
                     f"{name} reaches S/N {lowest:.1f} at {at:.0f} km/s: no absorber does that",
                 )
             )
+        # where the negative side is the stronger one, the peak is its side lobe
+        depth = -float(np.nanmin(curves.solo[m][window])) - max(-NEGATIVE_SNR, snr)
         results.append(
             MoleculeResult(
                 name=name,
@@ -294,11 +304,11 @@ def judge(
                 n_null=law.n_null,
                 nu_eff=law.nu_eff,
                 null=None if evidence.nulls is None else NullSummary(law.mean, law.std),
-                efficiency=_efficiency(law, captured),
+                efficiency=_efficiency(law, captured, scatter),
                 masked_fraction=float(masked_fraction[m]),
                 verdict=verdict(
                     p_global, exceeding, conditional if len(evidence.names) > 1 else snr, velocity, error,
-                    strongest, evidence.resolution_km_s,
+                    strongest, evidence.resolution_km_s, depth,
                 ),
                 position_xy=position_xy,
                 extra={"null_exceeding": exceeding, "null_family": law.family, "psf_captured": captured},
@@ -317,6 +327,9 @@ def _velocity_error(snr: float, curvature: float, evidence: Evidence) -> float:
     return float(np.hypot(1.0 / (snr * np.sqrt(curvature)), zero))
 
 
-def _efficiency(law: Calibration, captured_squares: float) -> float:
-    """Calibrated S/N over the limit of the same columns with the claimed noise and the whole PSF."""
-    return float(np.sqrt(captured_squares) / law.scale)
+def _efficiency(law: Calibration, captured_squares: float, scatter: float) -> float:
+    """Calibrated S/N over the limit of the same columns, white noise of the measured scatter, and the whole PSF.
+
+    Not above one: a null sample that scatters less than the samples it is made of does so by chance.
+    """
+    return float(min(1.0, np.sqrt(captured_squares) * scatter / law.scale))

@@ -16,6 +16,7 @@ from xcorr.noise import (
     audit,
     excess_scatter,
     flag_outliers,
+    like_their_ring,
     running_variance,
 )
 from xcorr.psf import (
@@ -214,7 +215,7 @@ def prepare(cube: Cube, scenery: Scenery, settings: StarlightSettings) -> Prepar
     )
     kept = ~excluded_spaxels((ny, nx), scenery, DEFAULT_FWHM_PIXELS if psf is None else psf.fwhm_pixels)
     fit, weights, nuisance, audited = _remove_starlight(
-        cube, spectra, weights, claimed, nuisance, kept, no_star, notes
+        cube, spectra, weights, claimed, nuisance, kept, star_xy, no_star, notes
     )
     del claimed
     telluric = fit_tellurics(cube, star, resolving, no_star, notes)
@@ -261,6 +262,7 @@ def _remove_starlight(
     claimed: NDArray[np.float32] | None,
     nuisance: Nuisance,
     kept: NDArray[np.bool_],
+    star_xy: tuple[float, float] | None,
     no_star: bool,
     notes: list[Note],
 ) -> tuple[StarlightFit, NDArray[np.float32], Nuisance, NoiseAudit]:
@@ -271,8 +273,7 @@ def _remove_starlight(
     fit = fit_spaxels(spectra, weights, nuisance, in_place=True)
     if len(weights) >= MIN_SPAXELS:
         in_channel, in_spaxel = excess_scatter(fit.residual, weights)
-        # a bright companion's own lines are not noise
-        in_spaxel[~kept.ravel()] = 1.0
+        in_spaxel = like_their_ring(in_spaxel, kept, star_xy)
         weights /= in_channel**2
         weights /= in_spaxel[:, None] ** 2
     outlier, scale = flag_outliers(fit.residual, weights)

@@ -19,6 +19,8 @@ MEDIAN_OF_CHI2 = 0.454936
 OUTLIER_SIGMA = 6.0
 EXCESS_SIGMA = 4.0
 SMOOTH_CHANNELS = 31
+RING_SPAXELS = 20
+"""Spaxels at a companion's separation that stand for the noise under it."""
 MIN_SPAXELS = 30
 """Fewer spaxels than this cannot support a regression over the field."""
 
@@ -227,6 +229,37 @@ def excess_scatter(
             channel[i] = MAD_TO_SIGMA * np.median(scaled)
     channel = _significant(channel, np.count_nonzero(weights, axis=0))
     return channel.astype(np.float32), spaxel.astype(np.float32)
+
+
+def like_their_ring(
+    factor: NDArray[np.float32], kept: NDArray[np.bool_], star_xy: tuple[float, float] | None
+) -> NDArray[np.float32]:
+    """Factors with those of excluded spaxels replaced by the typical one of kept spaxels at their separation.
+
+    A bright companion's own lines are not noise, but the noise under it is that of its surroundings: left at
+    one, the target would scatter more than the nulls that calibrate it (measured: 1.57 for an excess of 1.6).
+
+    Parameters
+    ----------
+    factor : float32 array (n_spaxel,)
+    kept : bool array (ny, nx)
+    star_xy : (x, y) or None
+        None: the typical factor of the field.
+    """
+    flat = kept.ravel()
+    if flat.all() or not flat.any():
+        return factor
+    out = factor.copy()
+    if star_xy is None:
+        out[~flat] = np.median(factor[flat])
+        return out
+    rows, columns = np.indices(kept.shape)
+    separation = np.hypot(columns - star_xy[0], rows - star_xy[1]).ravel()
+    own = np.flatnonzero(flat)
+    for p in np.flatnonzero(~flat):
+        nearest = own[np.argsort(np.abs(separation[own] - separation[p]), kind="stable")[:RING_SPAXELS]]
+        out[p] = np.median(factor[nearest])
+    return out
 
 
 def _significant(factor: NDArray, count: NDArray) -> NDArray[np.float64]:

@@ -129,7 +129,7 @@ class _Engines:
     def _make(self, i: int) -> ExposureEngine:
         """Read, prepare and project one exposure."""
         cube = self.exposures.cube(i)
-        if i == 0 and cube.is_spectrum:
+        if i == 0 and cube.is_spectrum and not self.templates:
             self.velocities, self.searched = _null_grid(self.velocities)
         templates = self.exposures.templates(cube, float(np.abs(self.velocities).max()))
         if i == 0:
@@ -179,7 +179,9 @@ def _add_target_once(
 ) -> None:
     """Target and null sums of exposure i; the null positions are placed with the first."""
     if i == 0:
-        exposures.first_target = None if exposures.is_spectrum else found.target_xy
+        # a blind search may hold exposures or make them again: neither may know the position it found
+        known = not exposures.is_spectrum and found.n_positions == 1
+        exposures.first_target = found.target_xy if known else None
         if not exposures.is_spectrum:
             _place_nulls(found, first, exposures)
     _add_target(found, exposures, engines[i], i)
@@ -314,7 +316,8 @@ def _evidence(search: _Search, exposures: Exposures) -> Evidence:
     """Sums over exposures, and what the verdicts need besides."""
     prepared = [record["exposure"] for record in search.records]
     fits = [e.telluric for e in prepared if e.telluric is not None and e.telluric.usable]
-    zero_points = [fit.velocity_err_km_s for fit in fits]
+    # an offset of the tellurics is a zero point that nobody corrects: part of the error
+    zero_points = [np.hypot(fit.velocity_err_km_s, fit.velocity_km_s) for fit in fits]
     nulls = [record["nulls"] for record in search.records]
     assert search.gram is not None  # set with the first exposure
     evidence = Evidence(
@@ -327,9 +330,7 @@ def _evidence(search: _Search, exposures: Exposures) -> Evidence:
         position_correlation=np.mean([record["null_correlation"] for record in search.records], axis=0),
         n_positions=search.n_positions,
         resolution_km_s=float(np.mean([e.resolution_km_s for e in prepared])),
-        zero_point_err_km_s=float(np.sqrt(np.sum(np.square(zero_points))) / len(zero_points))
-        if zero_points
-        else float("nan"),
+        zero_point_err_km_s=float(np.sqrt(np.mean(np.square(zero_points)))) if zero_points else float("nan"),
         systemic_velocity_km_s=exposures.settings.target.systemic_velocity_km_s,
     )
     if not np.any(np.isfinite(evidence.target.snr())):
@@ -355,6 +356,9 @@ def _answer(search: _Search, exposures: Exposures) -> RunResult:
         units=["star" if t.kind == "full" and in_star_units else "template" for t in search.templates],
         masked_fraction=np.mean([record["masked"] for record in search.records], axis=0),
         captured=float(np.mean([record["captured"] for record in search.records])),
+        scatter=1.0
+        if exposures.is_spectrum
+        else float(np.mean([e.audit.scatter_over_claimed for e in prepared])),
         position_xy=None if exposures.is_spectrum else search.target_xy,
     )
     all_notes = [note for e in prepared for note in e.notes]
@@ -393,11 +397,11 @@ def _null_notes(evidence: Evidence, curves: Curves) -> list[Note]:
     """What the user must know about the null sample."""
     notes = []
     families = {law.family for law in curves.laws}
-    if evidence.nulls is None:
+    if "far velocities" in families:
         notes.append(
             Note(
                 "null-from-velocities",
-                "one spectrum has no companion-free positions: the null is its far velocities",
+                "too few companion-free positions (an extracted spectrum has none): the null is the far velocities",
             )
         )
     for name, excess in zip(evidence.names, curves.far_excess, strict=True):

@@ -26,6 +26,8 @@ from xcorr.starlight import Nuisance, StarlightFit
 CORRECTION_STEP = 4
 """The correction of info is computed on every 4th velocity and splined (info error 4e-5, 4e-4 with gaps)."""
 CONTINUUM_RIDGE = 1e-6
+DEGENERATE = 1e7
+"""Variance inflation of the joint fit above which a template cannot be told from the others (float32 sums: 1e-7)."""
 CONTINUUM_RANK = 1e-7
 """Relative norm under which a projected companion continuum column is spanned by the starlight."""
 SPAXEL_BLOCK = 512
@@ -293,7 +295,9 @@ class PositionSums:
         right = np.moveaxis(self.num, 1, 2) / scale
         amplitude = np.einsum("...ij,...j->...i", inverse, right) / scale
         error = np.sqrt(np.einsum("...ii->...i", inverse)) / scale
-        error = np.where(diagonal > 0, error, np.inf)
+        # a direction that only the ridge holds has no information: its S/N would be rounding over rounding
+        degenerate = np.einsum("...ii->...i", inverse) > DEGENERATE
+        error = np.where((diagonal > 0) & ~degenerate, error, np.inf)
         return np.moveaxis(amplitude, 2, 1), np.moveaxis(error, 2, 1)
 
 

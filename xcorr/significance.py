@@ -171,7 +171,10 @@ def held_out(null: NDArray, velocity_correlation: NDArray, position_correlation:
         others = np.delete(np.arange(len(null)), i)
         if others.size < 2:
             continue
-        law = calibrate(null[others], velocity_correlation, position_correlation[np.ix_(others, others)])
+        try:
+            law = calibrate(null[others], velocity_correlation, position_correlation[np.ix_(others, others)])
+        except CoverageError:
+            continue
         out[i] = law.snr(null[i])
     return out
 
@@ -365,6 +368,7 @@ def verdict(
     velocity_err_km_s: float,
     strongest_velocity_km_s: float,
     resolution_km_s: float,
+    negative_excess: float = 0.0,
 ) -> str:
     """The four verdicts of the summary.
 
@@ -374,8 +378,10 @@ def verdict(
     """
     if not p_global <= 1.35e-3:
         return "not detected"
-    tolerance = max(3.0 * velocity_err_km_s, 0.5 * resolution_km_s)
+    # without an error (a single velocity, no curvature) half a resolution element decides
+    tolerance = float(np.nanmax([3.0 * velocity_err_km_s, 0.5 * resolution_km_s]))
     agrees = abs(velocity_km_s - strongest_velocity_km_s) <= tolerance
-    if not (agrees and snr_conditional >= 3.0):
+    side_lobe = negative_excess > 0.0
+    if not (agrees and snr_conditional >= 3.0) or side_lobe:
         return "ambiguous"
     return "detected" if p_global <= 2.9e-7 and exceeding == 0 else "evidence"
