@@ -24,7 +24,11 @@ def test_kmos_noise_zero_is_masked(reference_data):
     assert cube.wavelength_um == pytest.approx(1.0 + header["CD3_3"] * np.arange(2048), rel=1e-12)
     assert cube.mask[expected_bad].all()
     extra = cube.mask & ~expected_bad
-    assert np.all(np.abs(data[extra]) == 0)  # everything else that is masked is an exact zero
+    # everything else that is masked is an exact zero, or claims an error far below all others: of the 0.15 % of
+    # samples beside the gaps, the lowest claims 3e-7 of the median sigma
+    absurd = noise < np.sqrt(1.1e-3) * np.median(noise[~cube.mask])
+    assert np.all((data[extra] == 0) | absurd[extra])
+    assert 1e-4 < (extra & absurd).mean() < 3e-3
     assert 0.07 <= cube.mask.mean() <= 0.32
     good = ~cube.mask
     factor = 10.0**cube.scale_exponent
